@@ -1,0 +1,178 @@
+"""The frame table on disk: from merged chunks to frames.parquet and errors.parquet."""
+
+from collections.abc import Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+from numpy.typing import NDArray
+
+from pcaptool.audit.merge import Chunk
+from pcaptool.audit.piece import field_columns, is_message_field
+from pcaptool.coding.chain import REASONS
+from pcaptool.frames.decode import KIND
+from pcaptool.frames.table import ARRIVALS, CORRECTED, CORRUPTED, ERRORS, FRAMES, NO_COUNTER, STATES
+from pcaptool.profile import Field, Profile, WrapperField
+from pcaptool.table import Column
+
+ROW_GROUP = 1 << 18
+LABEL = pa.dictionary(pa.int32(), pa.string())
+TYPES = {"label": LABEL, "timestamp": pa.timestamp("ns", "UTC")}
+
+
+def arrow_type(column: Column) -> pa.DataType:
+    """Return the arrow type of a documented column."""
+    return TYPES.get(column.dtype) or pa.type_for_alias(column.dtype)
+
+
+def columns_of(profiles: Sequence[Profile]) -> tuple[Column, ...]:
+    """Return the documented columns of the frame table for some profiles."""
+    columns = {c.name: c for c in FRAMES}
+    for profile in profiles:
+        for source, _ in field_columns(profile):
+            name = output_name(source)
+            if name not in columns:
+                columns[name] = _field_column(profile, source, name)
+    return tuple(columns.values())
+
+
+def output_name(source: str) -> str:
+    """Return the column of a field; a message field never hides a column of the table itself."""
+    if source == KIND:
+        return "kind_of_message"
+    return f"message.{source}" if source in {c.name for c in FRAMES} else source
+
+
+def _definition(profile: Profile, source: str) -> WrapperField | Field:
+    if source.startswith("wrapper."):
+        return profile.wrapper_fields[source.removeprefix("wrapper.")]
+    return profile.message_fields[source]
+
+
+def _field_column(profile: Profile, source: str, name: str) -> Column:
+    if source == KIND:
+        return Column(name, "label", "", "message kind; missing where none fits")
+    field = _definition(profile, source)
+    dtype = "label" if field.names else "double" if field.scale != 1 or field.offset else "int64"
+    return Column(name, dtype, field.unit, f"field {source} of profile {profile.name}")
+
+
+class FrameTable:
+    """Takes merged chunks with their links and arrivals; writes row groups of a fixed size.
+
+    Without a folder it only counts. The row groups do not depend on how chunks are cut. Encoding runs in a thread of its own while
+    the next rows are made ready.
+    """
+
+    def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str]) -> None:
+        self.columns = columns_of(profiles)
+        self.schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in self.columns])
+        self.errors_schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in ERRORS])
+        self.profiles, self.captures = profiles, list(captures)
+        self.rows = self.errors = 0
+        self._waiting: list[pa.RecordBatch] = []
+        self._waiting_rows = 0
+        self._thread = ThreadPoolExecutor(1)
+        self._writing: Future[None] | None = None
+        self._frames: pq.ParquetWriter | None = None
+        self._errors: pq.ParquetWriter | None = None
+        if folder is not None:
+            labels = [c.name for c in self.columns if c.dtype == "label"]
+            self._frames = pq.ParquetWriter(folder / "frames.parquet", self.schema, compression="zstd",
+                                            compression_level=1, use_dictionary=labels, write_statistics=["time"])
+            self._errors = pq.ParquetWriter(folder / "errors.parquet", self.errors_schema, compression="zstd",
+                                            compression_level=1, use_dictionary=False, write_statistics=False)
+
+    def add(self, profile: int, chunk: Chunk, who: NDArray[np.int64], arrival: NDArray[np.uint8],
+            names: Sequence[str]) -> None:
+        if not len(chunk) or self._frames is None:
+            self.rows += len(chunk)
+            return
+        if len(chunk.error_frame) and self._errors:
+            self._errors.write_batch(pa.record_batch(
+                [pa.array(chunk.error_frame + self.rows), pa.array(chunk.error_position)], self.errors_schema))
+            self.errors += len(chunk.error_frame)
+        self.rows += len(chunk)
+        self._waiting.append(self._batch(profile, chunk, who, arrival, names))
+        self._waiting_rows += len(chunk)
+        if self._waiting_rows >= ROW_GROUP:
+            self._flush(last=False)
+
+    def close(self) -> None:
+        self._flush(last=True)
+        if self._writing is not None:
+            self._writing.result()
+        self._thread.shutdown()
+        for writer in (self._frames, self._errors):
+            if writer is not None:
+                writer.close()
+
+    def _flush(self, *, last: bool) -> None:
+        table = pa.Table.from_batches(self._waiting, self.schema)
+        full = len(table) if last else len(table) // ROW_GROUP * ROW_GROUP
+        if self._writing is not None:
+            self._writing.result()
+        if full:
+            self._writing = self._thread.submit(self._write, table.slice(0, full))
+        self._waiting = table.slice(full).to_batches()
+        self._waiting_rows = len(table) - full
+
+    def _write(self, table: pa.Table) -> None:
+        if self._frames is not None:
+            self._frames.write_table(table, ROW_GROUP)
+
+    def _batch(self, profile: int, chunk: Chunk, who: NDArray[np.int64], arrival: NDArray[np.uint8],
+               names: Sequence[str]) -> pa.RecordBatch:
+        c, n = chunk.columns, len(chunk)
+        state = c["state"]
+        unusable = state >= CORRUPTED
+        any_unusable = bool(unusable.any())
+        missing = unusable if any_unusable else None
+        made: dict[str, pa.Array] = {
+            "capture": _label(c["capture"], self.captures),
+            "packet": pa.array(c["packet"]),
+            "slot": pa.array(c["slot"]),
+            "time": pa.array(c["time"]).cast(pa.timestamp("ns", "UTC")),
+            "profile": _label(np.full(n, profile, np.int32), [p.name for p in self.profiles]),
+            "link": _label(who, names),
+            "counter": pa.array(c["counter"], mask=_some(c["counter"] == NO_COUNTER)),
+            "state": _label(state, STATES),
+            "arrival": _label(arrival, ARRIVALS, arrival == 0),
+            "reason": _label(c["reason"], list(REASONS.values()), c["reason"] == 0),
+            "verified": pa.array(np.full(n, self.profiles[profile].chain.checks), mask=state != CORRECTED),
+            "wrong_bits": pa.array(c["wrong_bits"], mask=missing),
+            "headroom": pa.array(c["headroom"], mask=_some(np.isnan(c["headroom"]))),
+            "air_bits": pa.array(c["air_bits"]),
+        }
+        for source, _ in field_columns(self.profiles[profile]):
+            name = output_name(source)
+            absent = ~c[f"present:{source}"] | unusable if is_message_field(source) else None
+            if source == KIND:
+                kinds = [k.name for k in self.profiles[profile].message.kind]
+                made[name] = _label(c[source], kinds, unusable | (c[source] < 0))
+            else:
+                made[name] = _field_array(_definition(self.profiles[profile], source), c[source],
+                                          None if absent is None else _some(absent), self.schema.field(name).type)
+        arrays = [made[f.name] if f.name in made else pa.nulls(n, f.type) for f in self.schema]
+        return pa.record_batch(arrays, self.schema)
+
+
+def _some(mask: NDArray[np.bool_]) -> NDArray[np.bool_] | None:
+    return mask if mask.any() else None
+
+
+def _label(codes: NDArray[np.generic], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:
+    indices = pa.array(codes.astype(np.int32), mask=None if missing is None else _some(missing))
+    return pa.DictionaryArray.from_arrays(indices, pa.array(words, pa.string()), safe=False)
+
+
+def _field_array(field: WrapperField | Field, raw: NDArray[np.generic], absent: NDArray[np.bool_] | None,
+                 kind: pa.DataType) -> pa.Array:
+    if pa.types.is_dictionary(kind):
+        values, codes = np.unique(raw, return_inverse=True)
+        return _label(codes, [field.names.get(int(v), str(v)) for v in values], absent)
+    if pa.types.is_floating(kind):
+        return pa.array(raw * field.scale + field.offset, mask=absent)
+    return pa.array(raw.astype(np.int64, copy=False), mask=absent)

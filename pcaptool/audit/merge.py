@@ -1,0 +1,128 @@
+"""Bring the frames of many pieces into canonical order: by time, then capture, packet and slot.
+
+Pieces of one capture follow each other; captures of two recorders overlap; a multi-queue adapter
+leaves records slightly out of order. Each piece says for each of its batches the least time in it, so
+that frames can be handed on as soon as nothing earlier can come, with only the overlap in memory.
+"""
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from pcaptool.audit.piece import Part
+
+Columns = dict[str, NDArray[np.generic]]
+LAST = np.iinfo(np.int64).max
+
+
+@dataclass(slots=True)
+class Source:
+    """A part with what places it: its capture (-1: in the packet's upper bits), rank and time shift."""
+
+    part: Part
+    capture: int
+    rank: int
+    shift: int      # ns to add to order
+
+
+@dataclass(slots=True)
+class Chunk:
+    """Frames in canonical order; errors refer to rows of the chunk, ascending."""
+
+    columns: Columns
+    error_frame: NDArray[np.int64]
+    error_position: NDArray[np.int32]
+
+    def __len__(self) -> int:
+        return len(self.columns["packet"])
+
+    def take(self, rows: NDArray[np.int64]) -> "Chunk":
+        """Return some rows in the order given."""
+        place = np.full(len(self), -1, np.int64)
+        place[rows] = np.arange(len(rows))
+        frame = place[self.error_frame]
+        kept = np.flatnonzero(frame >= 0)
+        kept = kept[np.argsort(frame[kept], kind="stable")]
+        return Chunk({n: v[rows] for n, v in self.columns.items()}, frame[kept], self.error_position[kept])
+
+
+class _Stream:
+    """The batches of one source, with the least order of those not yet read."""
+
+    def __init__(self, source: Source) -> None:
+        self.source = source
+        least = np.array(source.part.least_order, np.int64) + source.shift
+        self._least = [*np.minimum.accumulate(least[::-1])[::-1].tolist(), LAST]
+        self._next = 0
+        self._readers: list[Iterator[pa.RecordBatch]] = []
+
+    @property
+    def least(self) -> int:
+        return int(self._least[self._next])
+
+    def read(self) -> Chunk:
+        if not self._readers:
+            paths = (self.source.part.path, self.source.part.errors_path)
+            self._readers = [iter(pa.ipc.open_stream(pa.OSFile(str(path)))) for path in paths]
+        frames, errors = (next(r) for r in self._readers)
+        self._next += 1
+        if self.least == LAST:
+            self._readers = []
+        columns: Columns = {
+            name: values.to_numpy(zero_copy_only=False)
+            for name, values in zip(frames.schema.names, frames.columns, strict=True)
+        }
+        n = frames.num_rows
+        if self.source.shift:
+            columns["order"] = columns["order"] + self.source.shift
+        if self.source.capture >= 0:
+            columns["capture"] = np.full(n, self.source.capture, np.int32)
+        else:
+            columns["capture"] = (columns["packet"] >> 40).astype(np.int32)
+            columns["packet"] = columns["packet"] & ((1 << 40) - 1)
+        columns["rank"] = np.full(n, self.source.rank, np.int32)
+        return Chunk(columns, errors.column(0).to_numpy(), errors.column(1).to_numpy())
+
+
+def merge(sources: Sequence[Source]) -> Iterator[Chunk]:
+    """Yield all frames of the sources in canonical order."""
+    streams = [_Stream(s) for s in sources if s.part.frames]
+    pool: list[Chunk] = []
+    while streams:
+        first = min(streams, key=lambda s: (s.least, s.source.rank))
+        pool.append(first.read())
+        streams = [s for s in streams if s.least != LAST]
+        bound, bound_rank = min(((s.least, s.source.rank) for s in streams), default=(LAST, 0))
+        ready, pool = _ready(pool, bound, bound_rank)
+        if ready is not None:
+            yield ready
+
+
+def _ready(pool: list[Chunk], bound: int, bound_rank: int) -> tuple[Chunk | None, list[Chunk]]:
+    """Return the frames that nothing unread can precede, sorted, and the pool of the others."""
+    whole = pool[0] if len(pool) == 1 else _joined(pool)
+    order, rank = whole.columns["order"], whole.columns["rank"]
+    if len(pool) > 1 or (order[1:] < order[:-1]).any():
+        by = (whole.columns["slot"], whole.columns["packet"], rank, order)
+        whole = whole.take(np.lexsort(by))
+        order, rank = whole.columns["order"], whole.columns["rank"]
+    if int(order[-1]) < bound:
+        return whole, []
+    free = (order < bound) | ((order == bound) & (rank <= bound_rank))
+    n = int(np.argmin(free)) if not free.all() else len(free)
+    if n == len(whole):
+        return whole, []
+    rest = whole.take(np.arange(n, len(whole)))
+    return (whole.take(np.arange(n)) if n else None), [rest]
+
+
+def _joined(chunks: Sequence[Chunk]) -> Chunk:
+    first = np.cumsum([0, *(len(c) for c in chunks)])
+    return Chunk(
+        {n: np.concatenate([c.columns[n] for c in chunks]) for n in chunks[0].columns},
+        np.concatenate([c.error_frame + f for c, f in zip(chunks, first, strict=False)]),
+        np.concatenate([c.error_position for c in chunks]),
+    )

@@ -1,0 +1,224 @@
+"""Run an audit: survey the captures, decode their pieces, follow the links, draw up the accounts."""
+
+import tempfile
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import Executor, Future
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pcaptool.audit.accounts import CaptureAccount, check_identity, totals_of_entries
+from pcaptool.audit.executor import Inline, processes
+from pcaptool.audit.frame_table import FrameTable
+from pcaptool.audit.judge import judge
+from pcaptool.audit.merge import Chunk, Source, merge
+from pcaptool.audit.naming import short_names
+from pcaptool.audit.piece import Job, PieceResult, decode_piece
+from pcaptool.audit.survey import survey_all
+from pcaptool.links.follow import FrameSlice, LinkFollower
+from pcaptool.links.numbering import Numbering
+from pcaptool.links.rows import gap_rows, interval_rows, link_rows
+from pcaptool.problem import Problem, UsageError
+from pcaptool.profile import Profile
+
+Progress = Callable[[int, int, int], None]      # bytes done, bytes in all, frames so far
+WORTH_PROCESSES = 48 << 20                      # bytes of captures below which one process is quicker
+SLICE = tuple(name for name in FrameSlice.__dataclass_fields__ if name != "profile")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Options:
+    """What an audit is asked for besides captures and profiles."""
+
+    begin: int | None = None            # ns; frames before are left out of the tables
+    end: int | None = None              # ns; frames from then on are left out
+    links: tuple[str, ...] = ()         # names to keep, * and ? allowed; empty: all
+    frames: bool = True                 # leave the frame table
+    jobs: int = 1
+    executor: Executor | None = None    # instead of processes of our own
+    progress: Progress | None = None
+
+
+@dataclass(slots=True)
+class AuditResult:
+    """The tables of an audit, in memory except for the frame table, which lies in ``folder``."""
+
+    profiles: tuple[Profile, ...]
+    links: list[dict[str, object]]
+    gaps: list[dict[str, object]]
+    intervals: list[dict[str, object]]
+    captures: list[dict[str, object]]
+    ledger: dict[str, int]
+    totals: dict[str, int]
+    verdict: str
+    notes: list[str]
+    problems: list[Problem]
+    frames: int
+    folder: Path | None
+    whole: bool                         # every capture was read to its end without damage
+    captures_found: int = 0
+    temporary: "tempfile.TemporaryDirectory[str] | None" = field(default=None, repr=False)
+
+
+def run_audit(paths: Sequence[Path], profiles: Sequence[Profile], options: Options,
+              folder: Path | None = None, problems: Sequence[Problem] = ()) -> AuditResult:
+    """Audit captures with profiles; the frame table goes to ``folder`` (a temporary one if None)."""
+    kept = None if folder else tempfile.TemporaryDirectory(prefix="pcaptool-")
+    target = folder or Path(kept.name if kept else "")
+    with tempfile.TemporaryDirectory(prefix="pcaptool-", dir=target) as scratch:
+        run = _Run(paths, tuple(profiles), options, Path(scratch), list(problems))
+        try:
+            return run.result(target if options.frames else None, kept)
+        finally:
+            run.close()
+
+
+class _Run:
+    def __init__(self, paths: Sequence[Path], profiles: tuple[Profile, ...], options: Options, scratch: Path,
+                 problems: list[Problem]) -> None:
+        self.options, self.profiles, self.scratch, self.problems = options, profiles, scratch, problems
+        names = short_names(paths)
+        total = sum(p.stat().st_size for p in paths if p.is_file())
+        self.total_bytes, self.done_bytes, self.frames = total, 0, 0
+        self.own = options.executor is None
+        many = options.jobs > 1 and total >= WORTH_PROCESSES
+        self.executor: Executor = options.executor or (processes(options.jobs) if many else Inline())
+        self.pending: list[tuple[int, Future[PieceResult]]] = []
+        self.captures: list[CaptureAccount] = []
+        for survey in survey_all(paths, self.problems):
+            account = CaptureAccount(names[survey.path], survey)
+            self.captures.append(account)
+        self.captures.sort(key=lambda c: c.rank_key)
+        for index, capture in enumerate(self.captures):
+            for number, piece in enumerate(capture.survey.pieces):
+                job = Job(piece, profiles, scratch, f"{index}-{number}")
+                self.pending.append((index, self.executor.submit(decode_piece, job)))
+
+    def close(self) -> None:
+        if self.own:
+            self.executor.shutdown(cancel_futures=True)
+
+    def result(self, folder: Path | None,
+               kept: "tempfile.TemporaryDirectory[str] | None") -> AuditResult:
+        follower = LinkFollower(self.profiles)
+        table = FrameTable(folder, self.profiles, [c.name for c in self.captures])
+        sources = list(self._sources())
+        hashed: list[dict[int, tuple[int, ...]]] = [{} for _ in self.profiles]
+        for source in sources:
+            hashed[source.part.profile] |= source.part.hashed
+        outside = 0
+        for index, profile in enumerate(self.profiles):
+            known: Numbering | None = None
+            if follower.makers[index].needs_message:
+                known = Numbering()
+                for source in sources:
+                    if source.part.profile == index:
+                        known.number(source.part.usable_keys)
+            mine = [s for s in sources if s.part.profile == index]
+            for chunk in merge(mine):
+                outside += self._follow(index, chunk, follower, known, table, hashed)
+        table.close()
+        return self._report(follower, hashed, table, folder, kept, outside)
+
+    def _sources(self) -> Iterator[Source]:
+        """Yield the parts of all pieces, in the canonical order of captures and pieces."""
+        rank, shift = 0, 0
+        left = []
+        for index, future in self.pending:
+            piece = future.result()
+            capture = self.captures[index]
+            shift = capture.add(piece, shift)
+            for part in piece.parts:
+                yield Source(part, index, rank, capture.shifts[-1])
+                self.frames += part.frames
+            left += capture.open_fragments(piece, index)
+            rank += 1
+            self.done_bytes += capture.piece_bytes(len(capture.shifts) - 1)
+            if self.options.progress:
+                self.options.progress(self.done_bytes, self.total_bytes, self.frames)
+        if left:
+            job = Job(None, self.profiles, self.scratch, "fragments", tuple(left))
+            piece = decode_piece(job)
+            for capture_index, entry, records in piece.fragment_entries(left):
+                self.captures[capture_index].settle(entry, records)
+            for part in piece.parts:
+                yield Source(part, -1, rank, 0)
+
+    def _follow(self, profile: int, chunk: Chunk, follower: LinkFollower, known: Numbering | None,
+                table: FrameTable, hashed: list[dict[int, tuple[int, ...]]]) -> int:
+        copies = follower.copies(_slice(profile, chunk))
+        if copies.any():
+            which, records = chunk.columns["capture"][copies], chunk.columns["records"][copies]
+            for index in np.unique(which):
+                self.captures[int(index)].copied(int(records[which == index].sum()))
+            chunk = chunk.take(np.flatnonzero(~copies))
+        outside = 0
+        if self.options.begin is not None or self.options.end is not None:
+            time = chunk.columns["time"]
+            inside = np.ones(len(time), np.bool_)
+            if self.options.begin is not None:
+                inside &= time >= self.options.begin
+            if self.options.end is not None:
+                inside &= time < self.options.end
+            outside = int((~inside).sum())
+            if outside:
+                chunk = chunk.take(np.flatnonzero(inside))
+        who, arrival = follower.add(_slice(profile, chunk), known)
+        names = follower.names(hashed)
+        if self.options.links:
+            keep = np.flatnonzero(self._wanted(names)[who])
+            chunk, who, arrival = chunk.take(keep), who[keep], arrival[keep]
+        table.add(profile, chunk, who, arrival, names)
+        return outside
+
+    def _wanted(self, names: Sequence[str]) -> NDArray[np.bool_]:
+        from fnmatch import fnmatchcase
+
+        patterns = self.options.links
+        return np.array([not patterns or any(fnmatchcase(n, p) for p in patterns) for n in names], np.bool_)
+
+    def _report(self, follower: LinkFollower, hashed: list[dict[int, tuple[int, ...]]], table: FrameTable,
+                folder: Path | None, kept: "tempfile.TemporaryDirectory[str] | None",
+                outside: int) -> AuditResult:
+        names = follower.names(hashed)
+        wanted = self._wanted(names)
+        if self.options.links and not wanted.any():
+            raise UsageError(Problem(
+                file="--link", place="", found=", ".join(self.options.links),
+                expected="one of " + (", ".join(sorted(names)[:20]) or "no link: no frame was found"),
+                fix="name a link as the table of links does, or use * and ?"))
+        dropped = [(c.first_time, c.last_time) for c in self.captures if c.drops]
+        gaps = gap_rows(follower, names, dropped)
+        links = link_rows(follower, names, gaps)
+        judge(links, {p.name: p for p in self.profiles})
+        intervals = interval_rows(follower, names, gaps)
+        keep = {n for n, w in zip(names, wanted, strict=True) if w}
+        links, gaps.rows, intervals = ([r for r in rows if r["link"] in keep]
+                                       for rows in (links, gaps.rows, intervals))
+        for capture in self.captures:
+            check_identity(capture)
+        ledger = totals_of_entries(self.captures)
+        notes = [note for c in self.captures for note in c.notes()]
+        if outside:
+            notes.append(f"{outside} frames lie outside the time asked for; they are in the ledger, not in the tables")
+        for profile in self.profiles:
+            if profile.wrapper.forwards == "good":
+                notes.append(f"profile {profile.name}: the gateway does not forward frames whose check failed; "
+                             "corrupted frames count as lost here")
+        totals = {name: sum(int(row[name] or 0) for row in links) for name in (   # type: ignore[call-overload]
+            "heard", "intact", "corrected", "unverified", "corrupted", "short", "repeated", "late", "restarts",
+            "lost", "lost_air", "lost_backhaul", "lost_undecided", "sent", "bits_corrected", "gaps")}
+        over = any(str(row["verdict"]).startswith("over limit") for row in links)
+        verdict = "limit exceeded" if over else "within limits" if links else "no frames"
+        whole = not self.problems and all(c.whole for c in self.captures)
+        return AuditResult(self.profiles, links, gaps.rows, intervals, [c.row() for c in self.captures], ledger,
+                           {"links": len(links), **totals}, verdict, notes, self.problems, table.rows, folder,
+                           whole, len(self.captures), kept)
+
+
+def _slice(profile: int, chunk: Chunk) -> FrameSlice:
+    return FrameSlice(profile, **{name: chunk.columns[name] for name in SLICE})  # type: ignore[arg-type]
+
+

@@ -1,0 +1,25 @@
+"""Error control coding: steps as array to array. No files, no tables of frames, no options.
+
+``STEPS`` names every coding step that a profile can use.
+"""
+
+from pcaptool.coding.bit_order import BitOrder
+from pcaptool.coding.block_code import BlockCode
+from pcaptool.coding.chain import Chain
+from pcaptool.coding.checksum import Checksum
+from pcaptool.coding.crc import Crc
+from pcaptool.coding.hamming import Hamming
+from pcaptool.coding.interleave import Interleave
+from pcaptool.coding.length import Length
+from pcaptool.coding.pad import Pad
+from pcaptool.coding.repeat import Repeat
+from pcaptool.coding.step import Step
+from pcaptool.coding.sync import Sync
+from pcaptool.coding.whiten import Whiten
+
+STEPS: dict[str, type[Step]] = {
+    step.name: step
+    for step in (Crc, Checksum, Hamming, BlockCode, Repeat, Interleave, Whiten, BitOrder, Sync, Length, Pad)
+}
+
+__all__ = ["STEPS", "Chain", "Step"]

@@ -1,0 +1,98 @@
+"""Interleaving: block interleavers of bits, bytes or symbols, and any permutation."""
+
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Annotated, ClassVar
+
+import numpy as np
+from annotated_types import Ge
+from numpy.typing import NDArray
+from typing_extensions import Doc
+
+from pcaptool.coding.bits import take_columns
+from pcaptool.coding.step import (
+    NO_CONTEXT,
+    Batch,
+    Bits,
+    Context,
+    Decoded,
+    LengthError,
+    ParameterError,
+    Step,
+    too_short,
+    whole,
+)
+
+
+@lru_cache(maxsize=256)
+def _positions(order: tuple[int, ...], unit: int, n: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return (bit of the data that place j on the air carries, the inverse) for words of n bits."""
+    symbols = (np.array(order)[None, :] + len(order) * np.arange(n // (unit * len(order)))[:, None]).reshape(-1)
+    forward = (symbols[:, None] * unit + np.arange(unit)).reshape(-1)
+    return forward, np.argsort(forward)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Interleave(Step):
+    """Symbols in another order: written row by row and sent column by column, or as listed.
+
+    A word longer than one block is interleaved block by block. Source: CCSDS 131.0-B, 4.4.1, with
+    rows = depth and columns = codeword length; the definition of a block interleaver.
+    """
+
+    name: ClassVar[str] = "interleave"
+    role = "order"
+
+    rows: Annotated[int, Ge(0), Doc("rows of a block interleaver")] = 0
+    columns: Annotated[int, Ge(0), Doc("columns; written row by row, sent column by column")] = 0
+    order: Annotated[tuple[int, ...], Doc("instead: order[j] is the symbol that is sent at place j")] = ()
+    unit: Annotated[int, Ge(1), Doc("bits of a symbol: 1, 8 for bytes, any other")] = 1
+
+    def __post_init__(self) -> None:
+        if self.order:
+            if self.rows or self.columns:
+                raise ParameterError("order", found="order with rows and columns", expected="one of them",
+                                     fix="leave one out")
+            if sorted(self.order) != list(range(len(self.order))):
+                raise ParameterError("order", found=f"{len(self.order)} places that are no permutation",
+                                     expected=f"every number from 0 to {len(self.order) - 1} once",
+                                     fix="look for a number that is missing or twice there")
+        elif not (self.rows and self.columns):
+            raise ParameterError("rows", found=f"rows = {self.rows}, columns = {self.columns}",
+                                 expected="both at least 1, or order", fix="set rows and columns")
+
+    @property
+    def sent(self) -> tuple[int, ...]:
+        """The symbol sent at every place of a block."""
+        if self.order:
+            return self.order
+        return tuple(range(self.rows * self.columns)) if 1 in (self.rows, self.columns) else tuple(
+            int(v) for v in np.arange(self.rows * self.columns).reshape(self.rows, self.columns).T.reshape(-1))
+
+    @property
+    def block(self) -> int:
+        """Bits of a block."""
+        return (len(self.order) or self.rows * self.columns) * self.unit
+
+    def coded_bits(self, k: int) -> int:
+        if k % self.block or not k:
+            raise LengthError(f"{k} bits are no whole number of interleaver blocks of {self.block} bits")
+        return k
+
+    data_bits = coded_bits
+
+    def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
+        self.coded_bits(data.shape[1])
+        return take_columns(data, _positions(self.sent, self.unit, data.shape[1])[0])
+
+    def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
+        self.data_bits(word.shape[1])
+        return take_columns(word, _positions(self.sent, self.unit, word.shape[1])[1]), None
+
+    def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
+        n = batch.bits.shape[1]
+        if n % self.block or not n:
+            return too_short(batch)
+        back = _positions(self.sent, self.unit, n)[1]
+        doubt = None if batch.doubt is None else take_columns(batch.doubt, back)
+        return whole(batch, take_columns(batch.bits, back), doubt)

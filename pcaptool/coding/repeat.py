@@ -1,0 +1,71 @@
+"""Repetition with majority decision."""
+
+from dataclasses import dataclass
+from typing import Annotated, ClassVar, Literal
+
+import numpy as np
+from annotated_types import Ge
+from numpy.typing import NDArray
+from typing_extensions import Doc
+
+from pcaptool.coding.step import (
+    NO_CONTEXT,
+    UNCORRECTABLE,
+    Batch,
+    Bits,
+    Context,
+    Decoded,
+    LengthError,
+    Step,
+    too_short,
+    whole,
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Repeat(Step):
+    """Every bit, or the whole word, sent several times; erased copies have no vote, ties are given up."""
+
+    name: ClassVar[str] = "repeat"
+    role = "code"
+
+    times: Annotated[int, Ge(2), Doc("copies sent")]
+    order: Annotated[Literal["bit", "word"], Doc("bit: each bit at once; word: the word again and again")] = "bit"
+
+    def coded_bits(self, k: int) -> int:
+        return k * self.times
+
+    def data_bits(self, n: int) -> int:
+        if n % self.times:
+            raise LengthError(f"{n} bits are no multiple of {self.times}")
+        return n // self.times
+
+    def _copies(self, word: NDArray[np.uint8]) -> NDArray[np.uint8]:
+        """Return uint8 (frame, copy, bit)."""
+        n = len(word)
+        if self.order == "word":
+            return word.reshape(n, self.times, -1)
+        return word.reshape(n, -1, self.times).swapaxes(1, 2)
+
+    def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
+        return np.tile(data, self.times) if self.order == "word" else np.repeat(data, self.times, axis=1)
+
+    def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
+        self.data_bits(word.shape[1])
+        return self._copies(word)[:, 0].copy(), None
+
+    def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
+        if batch.bits.shape[1] % self.times:
+            return too_short(batch)
+        copies = self._copies(batch.bits)
+        votes = np.ones_like(copies) if batch.doubt is None else (self._copies(batch.doubt) < 255).astype(np.uint8)
+        ones = (copies & votes).sum(axis=1, dtype=np.int32)
+        cast = votes.sum(axis=1, dtype=np.int32)
+        out = whole(batch, (2 * ones > cast).astype(np.uint8))
+        out.fault[(2 * ones == cast).any(axis=1)] = UNCORRECTABLE
+        wrong = ((copies != out.bits[:, None]) & (votes > 0)).sum(axis=1, dtype=np.int32)
+        out.repaired[:] = wrong.sum(axis=1)
+        t = (self.times - 1) // 2
+        worst = wrong.max(axis=1, initial=0)
+        out.headroom = (1 - worst / max(t, 1)).astype(np.float32)
+        return out

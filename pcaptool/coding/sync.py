@@ -1,0 +1,105 @@
+"""Find the sync word that stands before the data, tolerating wrong bits."""
+
+from dataclasses import dataclass
+from typing import Annotated, ClassVar
+
+import numpy as np
+from annotated_types import Ge
+from typing_extensions import Doc
+
+from pcaptool.coding.step import (
+    CHECK_FAILED,
+    NO_CONTEXT,
+    Batch,
+    Bits,
+    Context,
+    Decoded,
+    LengthError,
+    ParameterError,
+    Step,
+    too_short,
+    whole,
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sync(Step):
+    """A sync word at, or within some bits behind, the begin of the word.
+
+    The place with the fewest wrong bits is taken, the earliest of equals. Where none has at most
+    ``tolerate`` wrong bits the check fails and the data are read as if it stood at the begin.
+    """
+
+    name: ClassVar[str] = "sync"
+    role = "frame"
+
+    word: Annotated[str, Doc('the word: hex octets, or bits written "0b..."')]
+    tolerate: Annotated[int, Ge(0), Doc("wrong bits accepted")] = 0
+    within: Annotated[int, Ge(0), Doc("bits that may stand before it")] = 0
+
+    def __post_init__(self) -> None:
+        try:
+            size = len(self.pattern)
+        except ValueError:
+            size = 0
+        if not size:
+            raise ParameterError("word", found=repr(self.word), expected='hex octets or "0b" and bits',
+                                 fix='write for example "1ACFFC1D" or "0b11100010010"')
+        if 2 * self.tolerate >= size:
+            raise ParameterError("tolerate", found=str(self.tolerate), expected=f"less than half of {size} bits",
+                                 fix=f"set at most {(size - 1) // 2}")
+
+    @property
+    def pattern(self) -> Bits:
+        """The word's bits: uint8 (bit,)."""
+        if self.word.startswith("0b"):
+            return np.array([int(c, 2) for c in self.word[2:].replace("_", "")], np.uint8)
+        return np.unpackbits(np.frombuffer(bytes.fromhex(self.word), np.uint8))
+
+    def coded_bits(self, k: int) -> int:
+        return k + len(self.pattern)
+
+    def data_bits(self, n: int) -> int:
+        size = len(self.pattern)
+        if n < size:
+            raise LengthError(f"{n} bits are fewer than the {size} of the sync word")
+        return n - size
+
+    def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
+        word = np.broadcast_to(self.pattern, (len(data), len(self.pattern)))
+        return np.concatenate([word, data] if side is None else [side, word, data], axis=1)
+
+    def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
+        self.data_bits(word.shape[1])
+        return word[:, len(self.pattern) :], None
+
+    def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
+        frames, width = batch.bits.shape
+        pattern = self.pattern
+        size = len(pattern)
+        if width < size:
+            return too_short(batch)
+        places = min(self.within, width - size) + 1
+        wrong = np.stack([(batch.bits[:, p : p + size] != pattern).sum(axis=1) for p in range(places)], axis=1)
+        best = wrong.argmin(axis=1)
+        errors = wrong[np.arange(frames), best]
+        missed = errors > self.tolerate
+        best[missed] = 0
+        if not best.any():
+            out = whole(batch, batch.bits[:, size:], None if batch.doubt is None else batch.doubt[:, size:])
+        else:
+            data = np.zeros((frames, width - size), np.uint8)
+            doubt = None if batch.doubt is None else np.zeros_like(data)
+            side = np.zeros((frames, int(best.max())), np.uint8)
+            for place in np.unique(best):
+                rows = best == place
+                length = width - size - place
+                data[rows, :length] = batch.bits[rows, place + size :]
+                side[rows, :place] = batch.bits[rows, :place]
+                if doubt is not None and batch.doubt is not None:
+                    doubt[rows, :length] = batch.doubt[rows, place + size :]
+            out = whole(batch, data, doubt, side=side, side_length=best.astype(np.int64))
+            out.length = (width - size - best).astype(np.int64)
+        out.repaired[:] = np.where(missed, 0, errors)
+        out.fault[missed] = CHECK_FAILED
+        return out

@@ -1,0 +1,41 @@
+"""A 64-bit hash of a datagram with its addresses, to recognise one that was recorded twice."""
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+M = np.uint64(0xFF51AFD7ED558CCD)
+
+
+@njit(cache=True, nogil=True)
+def digest(
+    buffer: NDArray[np.uint8], start: NDArray[np.int64], held: NDArray[np.int32],
+    source: NDArray[np.uint64], destination: NDArray[np.uint64], ports: NDArray[np.uint64],
+    ident: NDArray[np.int32],
+) -> NDArray[np.uint64]:
+    """Return uint64 (datagram,); bit 0 says whether the datagram has an IPv4 identification.
+
+    Multiply-and-fold over 8 bytes at a time, after Dietzfelbinger et al. (1997), with a final mix.
+    """
+    n = len(start)
+    out = np.empty(n, np.uint64)
+    for i in range(n):
+        h = (source[i, 0] ^ (destination[i, 0] << np.uint64(1))) * M
+        h = (h ^ (h >> np.uint64(32)) ^ source[i, 1]) * M
+        h = (h ^ (h >> np.uint64(32)) ^ destination[i, 1]) * M
+        h = (h ^ (h >> np.uint64(32)) ^ ports[i]) * M
+        h = (h ^ (h >> np.uint64(32)) ^ np.uint64(ident[i] + 1)) * M
+        p, end = start[i], start[i] + held[i]
+        while p < end:
+            word = np.uint64(0)
+            if p + 8 <= end:
+                for k in range(8):
+                    word |= np.uint64(buffer[p + k]) << np.uint64(8 * k)
+            else:
+                for k in range(end - p):
+                    word |= np.uint64(buffer[p + k]) << np.uint64(8 * k)
+            h = (h ^ (h >> np.uint64(32)) ^ word) * M
+            p += 8
+        h ^= h >> np.uint64(29)
+        out[i] = (h & ~np.uint64(1)) | np.uint64(ident[i] > 0)
+    return out

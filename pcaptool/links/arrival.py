@@ -1,0 +1,263 @@
+"""How the frames of a link stand to its counter: in turn, late, repeated or a restart; and the gaps.
+
+Frames come in canonical order, batch by batch; all state is in arrays that the caller keeps, so
+that two calls equal one. Counters are extended past their modulus as in RFC 3550, A.1, with time as
+a second witness: the link's interval (declared, or the median seen) says how far the counter should
+have come, which resolves silences longer than the modulus and tells a restart from a loss.
+"""
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+IN_TURN, LATE, REPEATED, RESTART = 1, 2, 3, 4
+BY_COUNTER, BY_TIME, UNCERTAIN = 0, 1, 2
+RESOLVED = ("counter", "time", "time, uncertain")
+
+# A jump that time cannot judge is a restart past this many frames; RFC 3550, A.1, MAX_DROPOUT.
+MAX_DROPOUT = 3000
+SAMPLES = 65                # intervals of which the median is taken
+LEAST_SAMPLES = 5
+
+# One link's state; all times in ns.
+LINK_STATE = np.dtype([
+    ("extended", np.int64),     # highest extended counter of this run, -1 before the first frame
+    ("time", np.int64),         # order time of that frame
+    ("usable_time", np.int64),  # order time of the last usable frame
+    ("pending", np.int64),      # corrupted and short frames heard since then
+    ("last_gap", np.int64),     # number of the link's latest gap, -1
+    ("behind", np.int64),       # counter that would make a second frame in a row behind a restart
+    ("interval", np.int64),     # declared or median, 0 while unknown
+    ("samples", np.int64),
+    ("heard", np.int64), ("intact", np.int64), ("corrected", np.int64), ("unverified", np.int64),
+    ("corrupted", np.int64), ("short", np.int64),
+    ("repeated", np.int64), ("late", np.int64), ("restarts", np.int64),
+    ("bits_corrected", np.int64), ("bits_received", np.int64),
+    ("first_time", np.int64), ("last_time", np.int64), ("longest", np.int64),
+    ("corrupted_runs", np.int64), ("in_run", np.int64),
+    ("headroom_sum", np.float64), ("headroom_count", np.int64), ("headroom_worst", np.float64),
+])
+
+GAP = np.dtype([
+    ("link", np.int64),
+    ("before", np.int64), ("after", np.int64),      # extended counters
+    ("run", np.int64),
+    ("missing", np.int64), ("corrupted", np.int64),
+    ("from_order", np.int64), ("to_order", np.int64), ("shift", np.int64),
+    ("resolved", np.int64), ("previous", np.int64),  # the link's gap before this one
+])
+
+
+def new_links(n: int, interval: NDArray[np.int64]) -> NDArray[np.void]:
+    """Return the states of n links that have heard nothing; interval 0 where none is declared."""
+    links = np.zeros(n, LINK_STATE)
+    links["extended"] = links["last_gap"] = links["behind"] = -1
+    links["first_time"] = links["usable_time"] = np.iinfo(np.int64).min
+    links["headroom_worst"] = np.inf
+    links["interval"] = interval
+    links["samples"] = np.where(interval > 0, SAMPLES, 0)      # a declared interval needs none
+    return links
+
+
+@njit(cache=True, nogil=True)
+def _median(values: NDArray[np.int64], n: int) -> int:
+    return int(np.sort(values[:n])[n // 2])
+
+
+@njit(cache=True, nogil=True)
+def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int, window: int) -> tuple[int, int, int]:
+    """Return (advance, verdict, resolved) of a counter value against the highest one so far.
+
+    advance   frames past ``extended``; 0 or less: behind it
+    verdict   IN_TURN, LATE (perhaps repeated) or RESTART
+    """
+    delta = (counter - extended) % modulo           # 0 .. modulo - 1
+    back = (modulo - delta) % modulo                # how far behind, if behind
+    if interval > 0:
+        expected = elapsed / interval
+        turns = max(0, int(np.round((expected - delta) / modulo)))
+        advance = delta + turns * modulo
+        if advance == 0:
+            return 0, LATE, BY_COUNTER
+        if back <= window and (advance - expected) > (expected + back):
+            return -back, LATE, BY_COUNTER
+        if advance > 2 * expected + window and advance > 1:
+            return advance, RESTART, BY_TIME
+        if turns == 0 and 2 * expected < modulo:
+            return advance, IN_TURN, BY_COUNTER
+        return advance, IN_TURN, UNCERTAIN if expected > 20 * modulo else BY_TIME
+    if back <= window:
+        return -back, LATE, BY_COUNTER
+    if 2 * delta >= modulo or delta > MAX_DROPOUT:
+        return delta, RESTART, BY_COUNTER
+    return delta, IN_TURN, BY_COUNTER
+
+
+@njit(cache=True, nogil=True)
+def follow(
+    link: NDArray[np.int64], counter: NDArray[np.int64], state: NDArray[np.uint8], order: NDArray[np.int64],
+    time: NDArray[np.int64], wrong_bits: NDArray[np.int32], headroom: NDArray[np.float32],
+    air_bits: NDArray[np.int32],
+    links: NDArray[np.void], seen: NDArray[np.bool_], samples: NDArray[np.int64],
+    modulo: NDArray[np.int64], window: NDArray[np.int64], verifies: NDArray[np.bool_], gaps: NDArray[np.void],
+    n_gaps: int, run: NDArray[np.int64],
+) -> tuple[NDArray[np.uint8], int]:
+    """Advance the links by a batch of frames; return (arrival uint8 (frame,), gaps so far).
+
+    link     int64 (frame,)   -1: a frame to pass over
+    links    LINK_STATE (link,)      changed
+    seen     bool (link, slot)       the last extended counters that came, by counter % slots; changed
+    samples  int64 (link, SAMPLES)   intervals seen; changed
+    modulo, window, verifies  (link,) of the link's profile
+    gaps     GAP (gap,)  filled from n_gaps on; must have room for one more gap per frame
+    run      int64 (link,)  number of the run; changed
+    """
+    arrival = np.zeros(len(link), np.uint8)
+    slots = seen.shape[1]
+    for i in range(len(link)):
+        who = link[i]
+        if who < 0:
+            continue
+        at = links[who]
+        at.heard += 1
+        at.bits_received += air_bits[i]
+        if at.first_time == np.iinfo(np.int64).min:
+            at.first_time = time[i]
+        at.last_time = time[i]
+        if state[i] >= 2:
+            at.pending += 1
+            if state[i] == 2:
+                at.corrupted += 1
+                if not at.in_run:
+                    at.corrupted_runs += 1
+                    at.in_run = 1
+            else:
+                at.short += 1
+            continue
+        at.in_run = 0
+        if state[i] == 0:
+            at.intact += 1
+        else:
+            at.corrected += 1
+            at.bits_corrected += wrong_bits[i]
+            if not verifies[who]:
+                at.unverified += 1
+        if not np.isnan(headroom[i]):
+            at.headroom_sum += headroom[i]
+            at.headroom_count += 1
+            at.headroom_worst = min(at.headroom_worst, headroom[i])
+        if at.usable_time != np.iinfo(np.int64).min:
+            at.longest = max(at.longest, order[i] - at.usable_time)
+        at.usable_time = order[i]
+        if counter[i] < 0 or modulo[who] == 0:
+            at.pending = 0
+            continue
+        if at.extended < 0:
+            arrival[i] = IN_TURN
+            at.extended = counter[i]
+            at.time = order[i]
+            at.pending = 0
+            seen[who, at.extended % slots] = True
+            continue
+        elapsed = max(order[i] - at.time, 0)
+        advance, verdict, resolved = extend(
+            counter[i], at.extended, modulo[who], elapsed, at.interval, window[who])
+        if verdict == LATE and counter[i] == at.behind and elapsed > at.interval > 0:
+            verdict = RESTART           # two in a row behind: the count began again within the window
+        at.behind = -1
+        if verdict == LATE:
+            place = at.extended + advance
+            at.behind = (counter[i] + 1) % modulo[who]
+            if place < 0 or seen[who, place % slots]:
+                arrival[i] = REPEATED
+                at.repeated += 1
+                continue
+            arrival[i] = LATE
+            at.late += 1
+            seen[who, place % slots] = True
+            g = at.last_gap
+            while g >= 0 and gaps[g].run == run[who] and gaps[g].after > place:
+                if gaps[g].before < place:
+                    gaps[g].missing -= 1
+                    break
+                g = gaps[g].previous
+            continue
+        if verdict == RESTART:
+            arrival[i] = RESTART
+            at.restarts += 1
+            run[who] += 1
+            for k in range(slots):
+                seen[who, k] = False
+            at.extended = counter[i]
+            at.time = order[i]
+            at.pending = 0
+            seen[who, at.extended % slots] = True
+            continue
+        arrival[i] = IN_TURN
+        if advance == 1 and at.samples < SAMPLES and elapsed > 0:
+            samples[who, at.samples] = elapsed
+            at.samples += 1
+            if at.samples >= LEAST_SAMPLES:
+                at.interval = _median(samples[who], at.samples)
+        if advance > 1:
+            gap = gaps[n_gaps]
+            gap.link = who
+            gap.before = at.extended
+            gap.after = at.extended + advance
+            gap.run = run[who]
+            gap.missing = advance - 1
+            gap.corrupted = min(at.pending, advance - 1)
+            gap.from_order = at.time
+            gap.to_order = order[i]
+            gap.shift = order[i] - time[i]
+            gap.resolved = resolved
+            gap.previous = at.last_gap
+            at.last_gap = n_gaps
+            n_gaps += 1
+        for k in range(min(advance - 1, slots)):
+            seen[who, (at.extended + 1 + k) % slots] = False
+        if advance - 1 > slots:
+            for k in range(slots):
+                seen[who, k] = False
+        at.extended += advance
+        at.time = order[i]
+        at.pending = 0
+        seen[who, at.extended % slots] = True
+    return arrival, n_gaps
+
+
+@njit(cache=True, nogil=True)
+def find_copies(
+    digest: NDArray[np.uint64], slot: NDArray[np.int16], order: NDArray[np.int64],
+    table: NDArray[np.uint64], table_time: NDArray[np.int64], last: NDArray[np.bool_],
+    window: int, window_without_ident: int,
+) -> NDArray[np.bool_]:
+    """Return which frames lie in a datagram that was recorded before, within the window.
+
+    The same addresses, ports, IP identification and bytes make the same datagram. A radio repeat is
+    forwarded in a new datagram with an identification of its own; where there is none, only copies
+    within the much shorter window_without_ident (ns) count.
+    table, table_time  (bucket, way)  digests seen lately; changed
+    last               bool (1,)      verdict on the datagram of the frame before; changed
+    """
+    copies = np.zeros(len(digest), np.bool_)
+    buckets, ways = table.shape
+    for i in range(len(digest)):
+        if slot[i] > 0:
+            copies[i] = last[0]
+            continue
+        d = digest[i]
+        bucket = np.int64((d >> np.uint64(20)) % np.uint64(buckets))
+        span = window if d & np.uint64(1) else window_without_ident
+        found, oldest = False, 0
+        for w in range(ways):
+            if table[bucket, w] == d and abs(order[i] - table_time[bucket, w]) <= span:
+                found = True
+                break
+            if table_time[bucket, w] < table_time[bucket, oldest]:
+                oldest = w
+        if not found:
+            table[bucket, oldest] = d
+            table_time[bucket, oldest] = order[i]
+        copies[i] = last[0] = found
+    return copies
