@@ -5,7 +5,7 @@ pass needs; only small totals travel back. A piece knows nothing of other pieces
 not depend on how many there are or who decodes them.
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -59,6 +59,10 @@ class PieceResult:
     cut: int = 0
     udp: int = 0            # records that carried UDP datagrams
     checksum_bad: int = 0
+    first_packet: int = 0
+    begin_time: int = 0     # ns, of the first and the last record as recorded
+    end_time: int = 0
+    fragments: dict[str, list[OpenFragment]] = field(default_factory=dict)  # left over, by ledger entry
 
 
 def decode_piece(job: Job, decoders: Sequence[FrameDecoder] | None = None) -> PieceResult:
@@ -66,26 +70,49 @@ def decode_piece(job: Job, decoders: Sequence[FrameDecoder] | None = None) -> Pi
     decoders = decoders or [FrameDecoder(p) for p in job.profiles]
     writers = [_PartWriter(i, job.folder / f"{job.name}-{i}.arrow", d) for i, d in enumerate(decoders)]
     if job.piece is None:
-        batch, incomplete = join_fragments(list(job.open_fragments))
-        account = Account()
-        account.entries["fragment_incomplete"] = incomplete
-        batches: Iterator[Datagrams] = iter([batch])
-    else:
-        reader = read_datagrams(job.piece)
-        account, batches = reader.account, iter(reader)
-    result = PieceResult(account, [w.part for w in writers])
-    for datagrams in batches:
-        taken = np.zeros(len(datagrams), np.bool_)
-        for decoder, writer in zip(decoders, writers, strict=True):
-            frames, cut = decoder.decode(datagrams, taken)
-            result.cut += cut
-            result.checksum_bad += frames.checksum_bad
-            writer.add(frames)
-        result.claimed += int(datagrams.records[taken].sum())
-        result.udp += int(datagrams.records.sum())
+        return _decode_fragments(job, decoders, writers)
+    reader = read_datagrams(job.piece)
+    result = PieceResult(reader.account, [w.part for w in writers], first_packet=job.piece.first_packet)
+    for datagrams in reader:
+        _decode(datagrams, decoders, writers, result)
     for writer in writers:
         writer.close()
-    result.claimed -= result.cut
+    result.begin_time, result.end_time = reader.begin_time or 0, reader.end_time or 0
+    return result
+
+
+def _decode(datagrams: Datagrams, decoders: Sequence[FrameDecoder], writers: Sequence["_PartWriter"],
+            result: PieceResult) -> NDArray[np.bool_]:
+    """Decode a batch; return which datagrams a profile claims."""
+    taken = np.zeros(len(datagrams), np.bool_)
+    cut_records = 0
+    for decoder, writer in zip(decoders, writers, strict=True):
+        frames, cut = decoder.decode(datagrams, taken)
+        cut_records += cut
+        result.checksum_bad += frames.checksum_bad
+        writer.add(frames)
+    result.cut += cut_records
+    result.claimed += int(datagrams.records[taken].sum()) - cut_records
+    result.udp += int(datagrams.records.sum())
+    return taken
+
+
+def _decode_fragments(job: Job, decoders: Sequence[FrameDecoder], writers: Sequence["_PartWriter"]) -> PieceResult:
+    """Decode datagrams whose fragments lie in several pieces; each fragment's entry is told."""
+    datagrams, entries = join_fragments(job.open_fragments)
+    result = PieceResult(Account(), [w.part for w in writers])
+    taken = _decode(datagrams, decoders, writers, result)
+    for writer in writers:
+        writer.close()
+    claimed = set(datagrams.packet[taken].tolist())
+    joined = entries.pop("frames")
+    entries["frames"], entries["other_udp"], group = [], [], []
+    for fragment in joined:
+        group.append(fragment)
+        if fragment.packet in datagrams.packet:         # the last fragment of its datagram
+            entries["frames" if fragment.packet in claimed else "other_udp"] += group
+            group = []
+    result.fragments = entries
     return result
 
 

@@ -2,25 +2,25 @@
 
 import tempfile
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import Executor, Future
+from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
-from pcaptool.audit.accounts import CaptureAccount, check_identity, totals_of_entries
+from pcaptool.audit.accounts import CAPTURE_SHIFT, CaptureAccount, check_identity, total_ledger
 from pcaptool.audit.executor import Inline, processes
 from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
 from pcaptool.audit.merge import Chunk, Source, merge
 from pcaptool.audit.naming import short_names
 from pcaptool.audit.piece import Job, PieceResult, decode_piece
-from pcaptool.audit.survey import survey_all
+from pcaptool.capture import sha256, survey
 from pcaptool.links.follow import FrameSlice, LinkFollower
 from pcaptool.links.numbering import Numbering
 from pcaptool.links.rows import gap_rows, interval_rows, link_rows
-from pcaptool.problem import Problem, UsageError
+from pcaptool.problem import CaptureError, Problem, UsageError
 from pcaptool.profile import Profile
 
 Progress = Callable[[int, int, int], None]      # bytes done, bytes in all, frames so far
@@ -87,9 +87,15 @@ class _Run:
         self.executor: Executor = options.executor or (processes(options.jobs) if many else Inline())
         self.pending: list[tuple[int, Future[PieceResult]]] = []
         self.captures: list[CaptureAccount] = []
-        for survey in survey_all(paths, self.problems):
-            account = CaptureAccount(names[survey.path], survey)
-            self.captures.append(account)
+        self.hashing = ThreadPoolExecutor(1)
+        for path in paths:
+            try:
+                found = survey(path) if many else survey(path, None)
+            except CaptureError as error:
+                self.problems += error.problems
+                continue
+            digest = self.hashing.submit(sha256, path)
+            self.captures.append(CaptureAccount(names[path], found, digest))
         self.captures.sort(key=lambda c: c.rank_key)
         for index, capture in enumerate(self.captures):
             for number, piece in enumerate(capture.survey.pieces):
@@ -97,6 +103,7 @@ class _Run:
                 self.pending.append((index, self.executor.submit(decode_piece, job)))
 
     def close(self) -> None:
+        self.hashing.shutdown(cancel_futures=True)
         if self.own:
             self.executor.shutdown(cancel_futures=True)
 
@@ -135,14 +142,19 @@ class _Run:
                 self.frames += part.frames
             left += capture.open_fragments(piece, index)
             rank += 1
-            self.done_bytes += capture.piece_bytes(len(capture.shifts) - 1)
+            number = len(capture.shifts)
+            self.done_bytes += capture.survey.size * number // len(capture.survey.pieces) \
+                - capture.survey.size * (number - 1) // len(capture.survey.pieces)
             if self.options.progress:
                 self.options.progress(self.done_bytes, self.total_bytes, self.frames)
         if left:
+            left.sort(key=lambda f: (f.order, f.packet))
             job = Job(None, self.profiles, self.scratch, "fragments", tuple(left))
             piece = decode_piece(job)
-            for capture_index, entry, records in piece.fragment_entries(left):
-                self.captures[capture_index].settle(entry, records)
+            for entry, fragments in piece.fragments.items():
+                for fragment in fragments:
+                    owner = self.captures[fragment.packet >> CAPTURE_SHIFT]
+                    owner.entries[entry] += 1
             for part in piece.parts:
                 yield Source(part, -1, rank, 0)
 
@@ -189,7 +201,7 @@ class _Run:
                 file="--link", place="", found=", ".join(self.options.links),
                 expected="one of " + (", ".join(sorted(names)[:20]) or "no link: no frame was found"),
                 fix="name a link as the table of links does, or use * and ?"))
-        dropped = [(c.first_time, c.last_time) for c in self.captures if c.drops]
+        dropped = [(c.first_time or 0, c.last_time or 0) for c in self.captures if c.drops]
         gaps = gap_rows(follower, names, dropped)
         links = link_rows(follower, names, gaps)
         judge(links, {p.name: p for p in self.profiles})
@@ -199,7 +211,7 @@ class _Run:
                                        for rows in (links, gaps.rows, intervals))
         for capture in self.captures:
             check_identity(capture)
-        ledger = totals_of_entries(self.captures)
+        ledger = total_ledger(self.captures)
         notes = [note for c in self.captures for note in c.notes()]
         if outside:
             notes.append(f"{outside} frames lie outside the time asked for; they are in the ledger, not in the tables")

@@ -1,30 +1,44 @@
-"""Bytes of a buffer to bits, one array element each, and bit strings from text."""
+"""Bytes of a buffer to bits, one array element each; columns of bits; numbers to bits and back."""
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+# Eight bits of every byte, most significant first, as the eight bytes of one number
+_SPREAD = np.unpackbits(np.arange(256, dtype=np.uint8)[:, None], axis=1).view(np.uint64)[:, 0].copy()
+
 
 @njit(cache=True, nogil=True)
-def unpack_rows(buffer: NDArray[np.uint8], start: NDArray[np.int64], n_bytes: int) -> NDArray[np.uint8]:
-    """Return the bits of n_bytes bytes from every start, most significant first: uint8 (row, bit)."""
-    out = np.empty((len(start), n_bytes * 8), np.uint8)
+def _spread(
+    buffer: NDArray[np.uint8], start: NDArray[np.int64], n_bytes: int, table: NDArray[np.uint64]
+) -> NDArray[np.uint64]:
+    out = np.empty((len(start), n_bytes), np.uint64)
     for i in range(len(start)):
         for p in range(n_bytes):
-            byte = buffer[start[i] + p]
-            for k in range(8):
-                out[i, 8 * p + k] = (byte >> np.uint8(7 - k)) & np.uint8(1)
+            out[i, p] = table[buffer[start[i] + p]]
     return out
 
 
+def unpack_rows(buffer: NDArray[np.uint8], start: NDArray[np.int64], n_bytes: int) -> NDArray[np.uint8]:
+    """Return the bits of n_bytes bytes from every start, most significant first: uint8 (row, bit).
+
+    The caller makes sure that every row lies in the buffer.
+    """
+    return _spread(buffer, start, n_bytes, _SPREAD).view(np.uint8).reshape(len(start), n_bytes * 8)
+
+
 @njit(cache=True, nogil=True)
-def take_columns(bits: NDArray[np.uint8], columns: NDArray[np.int64]) -> NDArray[np.uint8]:
-    """Return bits[:, columns], frame by frame: uint8 (frame, column)."""
+def _take(bits: NDArray[np.uint8], columns: NDArray[np.int64]) -> NDArray[np.uint8]:
     out = np.empty((bits.shape[0], len(columns)), np.uint8)
     for i in range(bits.shape[0]):
         for j in range(len(columns)):
             out[i, j] = bits[i, columns[j]]
     return out
+
+
+def take_columns(bits: NDArray[np.uint8], columns: NDArray[np.int64]) -> NDArray[np.uint8]:
+    """Return bits[:, columns], frame by frame: uint8 (frame, column)."""
+    return _take(np.ascontiguousarray(bits), columns)
 
 
 def bits_of(value: int, width: int) -> NDArray[np.uint8]:

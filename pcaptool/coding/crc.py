@@ -24,14 +24,13 @@ def _compiled(code: CrcCode) -> tuple[NDArray[np.uint64], np.uint64]:
 
 
 def _finish(register: NDArray[np.uint64], code: CrcCode) -> NDArray[np.uint64]:
-    """Return kernel registers as CRC values: final reflection and XOR."""
-    if code.refin:
-        value = register
-    else:
-        value = register.byteswap() >> np.uint64(64 - code.width)
-    if code.refin != code.refout:
-        value = _reflected(value, code.width)
-    return value ^ np.uint64(code.xorout)
+    """Turn kernel registers into CRC values, in place: final reflection and XOR."""
+    if not code.refin:
+        register.byteswap(inplace=True)
+        register >>= np.uint64(64 - code.width)
+    value = _reflected(register, code.width) if code.refin != code.refout else register
+    value ^= np.uint64(code.xorout)
+    return value
 
 
 def _reflected(value: NDArray[np.uint64], width: int) -> NDArray[np.uint64]:

@@ -1,18 +1,21 @@
-"""Binary linear block codes as matrices: generator, parity check, right inverse, coset leaders."""
+"""Binary linear block codes as matrices: generator, parity check, distance, table of error patterns."""
 
 from dataclasses import dataclass
-from itertools import combinations
+from itertools import chain, combinations
 from math import comb
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pcaptool.coding.bits import take_columns
-from pcaptool.coding.block_kernel import correct, multiply
-from pcaptool.coding.step import UNCORRECTABLE, Batch, Bits, Decoded, LengthError, too_short, whole
+from pcaptool.coding.block_kernel import multiply, repair, syndromes_of
+from pcaptool.coding.differences import count_differences
+from pcaptool.coding.step import UNCORRECTABLE, Batch, Bits, Decoded, LengthError, ParameterError, too_short, whole
 
 LARGEST_TABLE = 1 << 20
-DENSE = 16              # check bits up to which leaders are looked up by the syndrome itself
+DENSE = 16              # check bits up to which patterns are looked up by the syndrome itself
+LISTED = 20             # codes of at most 2**LISTED words are listed to find their weights
+NO_TABLE = np.zeros((0, 0), np.uint8)
 
 
 def reduce_rows(matrix: NDArray[np.uint8]) -> tuple[NDArray[np.uint8], list[int], NDArray[np.uint8]]:
@@ -25,16 +28,15 @@ def reduce_rows(matrix: NDArray[np.uint8]) -> tuple[NDArray[np.uint8], list[int]
     pivots: list[int] = []
     for column in range(columns):
         at = len(pivots)
+        if at == rows:
+            break
         hits = np.flatnonzero(work[at:, column])
         if not len(hits):
             continue
         work[[at, at + hits[0]]] = work[[at + hits[0], at]]
         others = np.flatnonzero(work[:, column])
-        others = others[others != at]
-        work[others] ^= work[at]
+        work[others[others != at]] ^= work[at]
         pivots.append(column)
-        if len(pivots) == rows:
-            break
     return work[:, :columns], pivots, work[:, columns:]
 
 
@@ -43,26 +45,72 @@ def parity_check(generator: NDArray[np.uint8]) -> NDArray[np.uint8]:
     k, n = generator.shape
     reduced, pivots, _ = reduce_rows(generator)
     free = [j for j in range(n) if j not in pivots]
-    h = np.zeros((n - k, n), np.uint8)
+    h = np.zeros((len(free), n), np.uint8)
     for row, j in enumerate(free):
         h[row, j] = 1
-        h[row, pivots] = reduced[:k, j]
+        h[row, pivots] = reduced[: len(pivots), j]
     return h
 
 
-@dataclass(frozen=True)
-class LinearCode:
-    """An (n, k) code with bounded-distance decoding up to t errors per codeword."""
+def generator_of(parity: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """Return the systematic generator of the code with parity-check matrix H.
 
-    generator: NDArray[np.uint8]    # (k, n)
+    Check bits are taken from the right: for H = [P | I] the data bits stand in front.
+    """
+    return np.ascontiguousarray(parity_check(parity[:, ::-1])[::-1, ::-1])
+
+
+def code_weights(generator: NDArray[np.uint8]) -> dict[int, int] | None:
+    """Return the weight distribution {weight: codewords}; None where both code and dual are too large.
+
+    A large code's distribution follows from its dual's. Source: MacWilliams (1963), Bell Syst. Tech.
+    J. 42:79-94.
+    """
+    k, n = generator.shape
+    if k <= LISTED:
+        return _listed_weights(generator)
+    if n - k > LISTED:
+        return None
+    dual = _listed_weights(parity_check(generator))
+    weights = {}
+    for w in range(n + 1):
+        total = sum(
+            count * sum((-1) ** s * comb(d, s) * comb(n - d, w - s) for s in range(min(d, w) + 1))
+            for d, count in dual.items())
+        if total:
+            weights[w] = total >> (n - k)
+    return weights
+
+
+def _listed_weights(generator: NDArray[np.uint8]) -> dict[int, int]:
+    packed = np.packbits(generator, axis=1)
+    weight = np.zeros(1 << len(generator), np.int32)
+    for column in packed.T:
+        octets = np.zeros(1, np.uint8)
+        for row in column:
+            octets = np.concatenate([octets, octets ^ row])
+        weight += np.bitwise_count(octets)
+    return {w: int(count) for w, count in enumerate(np.bincount(weight)) if count}
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LinearCode:
+    """An (n, k) code with bounded-distance decoding of up to t errors per codeword.
+
+    reach  errors and erasures are repaired where 2 errors + erasures <= reach: least distance - 1
+    """
+
+    generator: NDArray[np.uint8]      # (k, n)
+    codewords: NDArray[np.uint8]      # (2**k, n) by data value, where k is small
     right_inverse: NDArray[np.uint8]  # (n, k): codeword @ right_inverse == data
-    columns: NDArray[np.uint64]     # (n,) syndromes of single errors
-    word_syndrome: NDArray[np.uint64]   # (2**n,) syndromes of whole words, where n is small
+    places: NDArray[np.int64]         # (k,) where the data bits stand in the codeword, or empty
+    columns: NDArray[np.uint64]       # (n,) syndromes of single errors
+    tables: NDArray[np.uint64]        # (octet, 256) the same for whole octets
     syndromes: NDArray[np.uint64]
-    leaders: NDArray[np.uint64]
+    leaders: NDArray[np.int16]
     weights: NDArray[np.int8]
     t: int
-    table: NDArray[np.uint8]        # all codewords by data value, where k is small
+    reach: int
 
     @property
     def n(self) -> int:
@@ -84,107 +132,116 @@ class LinearCode:
 
     def encode(self, data: Bits) -> Bits:
         self.coded_bits(data.shape[1])
-        return multiply(np.ascontiguousarray(data), self.k, self.generator, self.table)
+        return multiply(np.ascontiguousarray(data), self.generator, self.codewords)
 
     def strip(self, word: Bits) -> Bits:
         self.data_bits(word.shape[1])
-        if (self.right_inverse.sum(axis=0) == 1).all():         # data bits stand in the codeword
-            first = np.arange(0, word.shape[1], self.n)
-            places = (first[:, None] + self.right_inverse.argmax(axis=0)).reshape(-1)
-            return take_columns(np.ascontiguousarray(word), places)
-        return multiply(np.ascontiguousarray(word), self.n, self.right_inverse, np.zeros((0, 0), np.uint8))
+        if not len(self.places):
+            return multiply(np.ascontiguousarray(word), self.right_inverse, NO_TABLE)
+        first = np.arange(0, word.shape[1], self.n)
+        return take_columns(word, (first[:, None] + self.places).reshape(-1))
 
     def decode(self, batch: Batch) -> Decoded:
-        """Correct up to t errors in every codeword; more are found where the syndrome can tell."""
+        """Correct up to t errors in every codeword; a syndrome without pattern is UNCORRECTABLE."""
         frames, width = batch.bits.shape
         if width % self.n or not width:
             return too_short(batch)
-        word = np.empty((frames, width), np.uint8)
-        repaired = np.zeros(frames, np.int32)
-        worst = np.zeros(frames, np.int8)
-        given_up = np.zeros(frames, np.bool_)
-        correct(np.ascontiguousarray(batch.bits), self.n, self.columns, self.word_syndrome, self.syndromes,
-                self.leaders, self.weights, word, repaired, worst, given_up)
+        word = np.array(batch.bits)
+        doubt = NO_TABLE if batch.doubt is None else np.ascontiguousarray(batch.doubt)
+        received = syndromes_of(word, self.n, self.tables)
+        spent, given_up = np.zeros(frames, np.int32), np.zeros(frames, np.bool_)
+        repair(word, doubt, self.n, received, self.columns, self.syndromes, self.leaders, self.weights,
+               self.reach, spent, given_up)
         out = whole(batch, self.strip(word))
         out.fault[given_up] = UNCORRECTABLE
-        out.repaired[:] = repaired
-        out.headroom = (1 - worst / max(self.t, 1)).astype(np.float32)
+        out.repaired[:] = count_differences(word, np.ascontiguousarray(batch.bits))
+        if self.t:
+            left = np.maximum(1 - spent / (2 * self.t), 0).astype(np.float32)
+            left[given_up] = 0
+            out.headroom = left
         return out
 
 
-def linear_code(generator: NDArray[np.uint8], t: int | None = None) -> LinearCode:
-    """Return the code of a generator matrix (k, n) of full rank; t None: all that its distance allows.
+def linear_code(generator: NDArray[np.uint8], t: int | None = None, distance: int | None = None) -> LinearCode:
+    """Return the code of a generator matrix (k, n); t None: all errors that its distance allows.
 
-    Raises ValueError for rows that are not independent, and for a table beyond LARGEST_TABLE.
+    distance  least distance, where it is known
+    Raises ParameterError for rows that are not independent, a table beyond LARGEST_TABLE, and a t
+    that the distance does not allow.
     """
     k, n = generator.shape
-    if n > 64:
-        raise ValueError(f"codewords of {n} bits; at most 64 are decoded by table")
-    _, pivots, transform = reduce_rows(generator)
-    if len(pivots) < k:
-        raise ValueError("rows that are not independent")
+    reduced, pivots, transform = reduce_rows(generator)
+    if len(pivots) < k or n == k:
+        raise ParameterError(
+            "generator", found=f"{k} rows of rank {len(pivots)} and {n} columns",
+            expected="independent rows, fewer than columns", fix="take out rows that are sums of others")
+    if n - k > 64:
+        raise ParameterError("generator", found=f"{n - k} check bits", expected="at most 64",
+                             fix="decode a shorter code")
     right_inverse = np.zeros((n, k), np.uint8)
-    right_inverse[pivots] = transform[: len(pivots)]
-    identity = (generator.sum(axis=0) == 1)
-    if all(any(identity[j] and generator[b, j] for j in range(n)) for b in range(k)):
-        right_inverse[:] = 0                # systematic: take the data bits where they stand
-        for b in range(k):
-            right_inverse[next(j for j in range(n) if identity[j] and generator[b, j]), b] = 1
-    h = parity_check(generator)
-    r = n - k
-    shift = np.arange(r, dtype=np.uint64)
-    columns = (h.T.astype(np.uint64) << shift).sum(axis=1, dtype=np.uint64)
-    table = np.zeros((0, n), np.uint8)
+    right_inverse[pivots] = transform
+    unit = np.flatnonzero(generator.sum(axis=0) == 1)       # columns that carry one data bit unchanged
+    standing = {int(generator[:, j].argmax()): j for j in unit[::-1]}
+    places = np.array([standing[b] for b in range(k)] if len(standing) == k else [], np.int64)
+    if len(places):
+        right_inverse[:] = 0
+        right_inverse[places, np.arange(k)] = 1
+    if distance is None:
+        weights = code_weights(generator)
+        distance = min(w for w in weights if w) if weights else None
+    if t is None:
+        if distance is None:
+            raise ParameterError("t", found="no t", expected=f"t, for a code as large as ({n},{k})",
+                                 fix="set t to the errors that the code corrects per codeword")
+        t = (distance - 1) // 2
+    columns = _columns(generator)
+    syndromes, leaders, pattern_weights = _patterns(columns, n - k, t)
+    octets = np.zeros((-(-n // 8), 256), np.uint64)
+    for j in range(n):
+        size = min(8, n - j // 8 * 8)                   # bits of the octet that holds position j
+        octets[j // 8, (np.arange(256) >> (size - 1 - j % 8) & 1) == 1] ^= columns[j]
+    codewords = np.zeros((0, n), np.uint8)
     if k <= 12:
         values = np.arange(1 << k)[:, None] >> np.arange(k - 1, -1, -1) & 1
-        table = (values @ generator % 2).astype(np.uint8)
-    if t is None:
-        t = (minimum_distance(generator, table) - 1) // 2
-    if sum(comb(n, w) for w in range(1, t + 1)) > LARGEST_TABLE:
-        raise ValueError(f"more than {LARGEST_TABLE} error patterns of up to {t} bits")
-    found: dict[int, tuple[int, int]] = {}
-    for weight in range(1, t + 1):
-        for places in combinations(range(n), weight):
-            s = pattern = 0
-            for j in places:
-                s ^= int(columns[j])
-                pattern |= 1 << j
-            if s == 0 or s in found:
-                raise ValueError(f"two patterns of up to {t} errors that look alike: the distance is less "
-                                 f"than {2 * t + 1}")
-            found[s] = (pattern, weight)
-    if r <= DENSE:
-        leaders, weights = np.zeros(1 << r, np.uint64), np.full(1 << r, -1, np.int8)
-        syndromes = np.zeros(0, np.uint64)
-        for s, (pattern, weight) in found.items():
-            leaders[s], weights[s] = pattern, weight
-    else:
-        ordered = sorted(found)
-        syndromes = np.array(ordered, np.uint64)
-        leaders = np.array([found[s][0] for s in ordered], np.uint64)
-        weights = np.array([found[s][1] for s in ordered], np.int8)
-    word_syndrome = np.zeros(1 << n if n <= DENSE else 0, np.uint64)
-    for j in range(n if len(word_syndrome) else 0):
-        bit = 1 << (n - 1 - j)
-        word_syndrome.reshape(-1, 2, bit)[:, 1] ^= columns[j]
-    return LinearCode(generator, right_inverse, columns, word_syndrome, syndromes, leaders, weights, t, table)
+        codewords = (values @ generator % 2).astype(np.uint8)
+    reach = 2 * t if distance is None else min(distance - 1, 2 * t + 1)
+    return LinearCode(generator, codewords, right_inverse, places, columns, octets, syndromes, leaders,
+                      pattern_weights, t, reach)
 
 
-def minimum_distance(generator: NDArray[np.uint8], table: NDArray[np.uint8]) -> int:
-    """Return the minimum distance: by listing all codewords of a small k, else by dependent columns of H."""
-    if len(table):
-        return int(table[1:].sum(axis=1).min())
+def _columns(generator: NDArray[np.uint8]) -> NDArray[np.uint64]:
     h = parity_check(generator)
-    columns = [int(v) for v in (h.T.astype(np.uint64) << np.arange(len(h), dtype=np.uint64)).sum(1, dtype=np.uint64)]
-    singles = set(columns)
-    if 0 in singles:
-        return 1
-    if len(singles) < len(columns):
-        return 2
-    pairs = {a ^ b for a, b in combinations(columns, 2)}
-    if pairs & singles:
-        return 3
-    return 4 if len(pairs) < comb(len(columns), 2) else 5
+    shift = np.arange(len(h), dtype=np.uint64)
+    return np.bitwise_or.reduce(h.T.astype(np.uint64) << shift, axis=1)
 
 
-__all__ = ["LinearCode", "linear_code", "minimum_distance", "parity_check", "reduce_rows"]
+def _patterns(columns: NDArray[np.uint64], r: int, t: int
+              ) -> tuple[NDArray[np.uint64], NDArray[np.int16], NDArray[np.int8]]:
+    """Return (syndromes, leaders, weights) of all patterns of up to t errors, as ``repair`` takes them."""
+    n = len(columns)
+    size = sum(comb(n, w) for w in range(t + 1))
+    if size > LARGEST_TABLE:
+        raise ParameterError("t", found=str(t), expected=f"at most {LARGEST_TABLE} patterns of errors, not {size}",
+                             fix="set a lower t; what it does not correct is still found")
+    all_syndromes = [np.zeros(1, np.uint64)]
+    all_leaders = [np.full((1, t), -1, np.int16)]
+    for weight in range(1, t + 1):
+        flat = np.fromiter(chain.from_iterable(combinations(range(n), weight)), np.int16)
+        wrong = flat.reshape(-1, weight)
+        all_syndromes.append(np.bitwise_xor.reduce(columns[wrong], axis=1))
+        all_leaders.append(np.pad(wrong, ((0, 0), (0, t - weight)), constant_values=-1))
+    found, leaders = np.concatenate(all_syndromes), np.concatenate(all_leaders)
+    weights = (leaders >= 0).sum(axis=1).astype(np.int8)
+    by_syndrome = np.argsort(found, kind="stable")
+    found = found[by_syndrome]
+    if (found[1:] == found[:-1]).any():
+        raise ParameterError("t", found=str(t), expected=f"a code of distance {2 * t + 1} or more",
+                             fix="set a lower t, or check the matrix")
+    leaders, weights = np.ascontiguousarray(leaders[by_syndrome]), weights[by_syndrome]
+    if r > DENSE:
+        return found, leaders, weights
+    dense_leaders = np.full((1 << r, t), -1, np.int16)
+    dense_weights = np.full(1 << r, -1, np.int8)
+    dense_leaders[found.astype(np.int64)] = leaders
+    dense_weights[found.astype(np.int64)] = weights
+    return np.zeros(0, np.uint64), dense_leaders, dense_weights

@@ -90,7 +90,6 @@ class Step(ABC):
     """
 
     __slots__ = ()
-    __pydantic_config__: ClassVar[dict[str, Any]] = {"extra": "forbid", "strict": True}
     name: ClassVar[str]
     role: ClassVar[Literal["check", "code", "order", "frame"]]
 

@@ -86,8 +86,8 @@ class Whiten(Step):
     role = "order"
 
     poly: Annotated[str | int, Doc('recurrence, "x^9 + x^5 + 1" or one bit per term')] = 0
-    seed: Annotated[int, Ge(0), Doc("register; see register for its meaning")] = 0
-    register: Annotated[Literal["first bits", "history", "galois"],
+    seed: Annotated[int, Ge(0), Doc("register; see form for its meaning")] = 0
+    form: Annotated[Literal["first bits", "history", "galois"],
                         Doc('"first bits": the sequence begins with the seed, most significant bit first; '
                             '"history": the seed holds the bits before the first, most significant the latest; '
                             '"galois": the seed is the register x^0 .. x^(m-1), most significant bit x^0, '
@@ -145,9 +145,9 @@ class Whiten(Step):
             m = max(delays)
             if self.reciprocal:
                 delays = tuple(sorted([m, *(m - d for d in delays if d != m)]))
-            if self.register == "galois":
+            if self.form == "galois":
                 bits = galois_lfsr(delays, seed, n)
-            elif self.register == "history":
+            elif self.form == "history":
                 earliest_first = int(format(seed, f"0{m}b")[::-1], 2)
                 bits = lfsr(delays, earliest_first, n + m)[m:]
             else:

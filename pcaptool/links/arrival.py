@@ -32,7 +32,7 @@ LINK_STATE = np.dtype([
     ("heard", np.int64), ("intact", np.int64), ("corrected", np.int64), ("unverified", np.int64),
     ("corrupted", np.int64), ("short", np.int64),
     ("repeated", np.int64), ("late", np.int64), ("restarts", np.int64),
-    ("bits_corrected", np.int64), ("bits_received", np.int64),
+    ("bits_corrected", np.int64), ("bits_usable", np.int64),
     ("first_time", np.int64), ("last_time", np.int64), ("longest", np.int64),
     ("corrupted_runs", np.int64), ("in_run", np.int64),
     ("headroom_sum", np.float64), ("headroom_count", np.int64), ("headroom_worst", np.float64),
@@ -120,7 +120,6 @@ def follow(
             continue
         at = links[who]
         at.heard += 1
-        at.bits_received += air_bits[i]
         if at.first_time == np.iinfo(np.int64).min:
             at.first_time = time[i]
         at.last_time = time[i]
@@ -135,6 +134,7 @@ def follow(
                 at.short += 1
             continue
         at.in_run = 0
+        at.bits_usable += air_bits[i]
         if state[i] == 0:
             at.intact += 1
         else:
