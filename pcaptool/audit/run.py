@@ -56,23 +56,37 @@ class AuditResult:
     notes: list[str]
     problems: list[Problem]
     frames: int
-    folder: Path | None
     whole: bool                         # every capture was read to its end without damage
-    captures_found: int = 0
-    temporary: "tempfile.TemporaryDirectory[str] | None" = field(default=None, repr=False)
+    temporary: "tempfile.TemporaryDirectory[str]" = field(repr=False)
+
+    @property
+    def folder(self) -> Path:
+        """Where frames.parquet and errors.parquet lie until ``close``."""
+        return Path(self.temporary.name)
+
+    def close(self) -> None:
+        """Remove the temporary folder."""
+        self.temporary.cleanup()
 
 
-def run_audit(paths: Sequence[Path], profiles: Sequence[Profile], options: Options,
-              folder: Path | None = None, problems: Sequence[Problem] = ()) -> AuditResult:
-    """Audit captures with profiles; the frame table goes to ``folder`` (a temporary one if None)."""
-    kept = None if folder else tempfile.TemporaryDirectory(prefix="pcaptool-")
-    target = folder or Path(kept.name if kept else "")
-    with tempfile.TemporaryDirectory(prefix="pcaptool-", dir=target) as scratch:
-        run = _Run(paths, tuple(profiles), options, Path(scratch), list(problems))
-        try:
-            return run.result(target if options.frames else None, kept)
-        finally:
-            run.close()
+def run_audit(paths: Sequence[Path], profiles: Sequence[Profile], options: Options, near: Path | None = None,
+              problems: Sequence[Problem] = ()) -> AuditResult:
+    """Audit captures with profiles.
+
+    near  folder in which a temporary folder may hold the frame table; None: the system's
+    """
+    folder = tempfile.TemporaryDirectory(prefix=".pcaptool-", dir=near)
+    run = _Run(paths, tuple(profiles), options, Path(folder.name), list(problems))
+    try:
+        result = run.result(folder)
+    except BaseException:
+        folder.cleanup()
+        raise
+    finally:
+        run.close()
+    for part in Path(folder.name).glob("*.arrow"):
+        part.unlink()
+    return result
 
 
 class _Run:
@@ -107,10 +121,9 @@ class _Run:
         if self.own:
             self.executor.shutdown(cancel_futures=True)
 
-    def result(self, folder: Path | None,
-               kept: "tempfile.TemporaryDirectory[str] | None") -> AuditResult:
+    def result(self, folder: "tempfile.TemporaryDirectory[str]") -> AuditResult:
         follower = LinkFollower(self.profiles)
-        table = FrameTable(folder, self.profiles, [c.name for c in self.captures])
+        table = FrameTable(self.scratch if self.options.frames else None, self.profiles, [c.name for c in self.captures])
         sources = list(self._sources())
         hashed: list[dict[int, tuple[int, ...]]] = [{} for _ in self.profiles]
         for source in sources:
@@ -127,7 +140,7 @@ class _Run:
             for chunk in merge(mine):
                 outside += self._follow(index, chunk, follower, known, table, hashed)
         table.close()
-        return self._report(follower, hashed, table, folder, kept, outside)
+        return self._report(follower, hashed, table, folder, outside)
 
     def _sources(self) -> Iterator[Source]:
         """Yield the parts of all pieces, in the canonical order of captures and pieces."""
@@ -192,8 +205,7 @@ class _Run:
         return np.array([not patterns or any(fnmatchcase(n, p) for p in patterns) for n in names], np.bool_)
 
     def _report(self, follower: LinkFollower, hashed: list[dict[int, tuple[int, ...]]], table: FrameTable,
-                folder: Path | None, kept: "tempfile.TemporaryDirectory[str] | None",
-                outside: int) -> AuditResult:
+                folder: "tempfile.TemporaryDirectory[str]", outside: int) -> AuditResult:
         names = follower.names(hashed)
         wanted = self._wanted(names)
         if self.options.links and not wanted.any():
@@ -223,11 +235,12 @@ class _Run:
             "heard", "intact", "corrected", "unverified", "corrupted", "short", "repeated", "late", "restarts",
             "lost", "lost_air", "lost_backhaul", "lost_undecided", "sent", "bits_corrected", "gaps")}
         over = any(str(row["verdict"]).startswith("over limit") for row in links)
-        verdict = "limit exceeded" if over else "within limits" if links else "no frames"
+        limits = any(row["verdict"] == "within limits" for row in links)
+        verdict = "limit exceeded" if over else "within limits" if limits else "no limits" if links else "no frames"
         whole = not self.problems and all(c.whole for c in self.captures)
         return AuditResult(self.profiles, links, gaps.rows, intervals, [c.row() for c in self.captures], ledger,
-                           {"links": len(links), **totals}, verdict, notes, self.problems, table.rows, folder,
-                           whole, len(self.captures), kept)
+                           {"links": len(links), **totals}, verdict, notes, self.problems, table.rows, whole,
+                           folder)
 
 
 def _slice(profile: int, chunk: Chunk) -> FrameSlice:

@@ -38,7 +38,8 @@ class BitOrder(Step):
 
     def __post_init__(self) -> None:
         if self.within % self.unit:
-            raise ParameterError("within", found=f"{self.within}", expected=f"a multiple of unit = {self.unit}",
+            raise ParameterError("within", found=str(self.within),
+                                 expected=f"a multiple of unit = {self.unit}",
                                  fix=f"set within = {self.unit * 2}")
 
     def coded_bits(self, k: int) -> int:
@@ -46,7 +47,8 @@ class BitOrder(Step):
             raise LengthError(f"{k} bits are no whole number of words of {self.within} bits")
         return k
 
-    data_bits = coded_bits
+    def data_bits(self, n: int) -> int:
+        return self.coded_bits(n)
 
     def _reverse(self, bits: NDArray[np.uint8]) -> NDArray[np.uint8]:
         n, width = bits.shape

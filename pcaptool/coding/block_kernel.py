@@ -8,11 +8,15 @@ from numpy.typing import NDArray
 @njit(cache=True, nogil=True, inline="always")
 def _octet(row: NDArray[np.uint8], first: int) -> np.uint64:
     """Return eight bits as a number, first bit most significant: one multiplication gathers them."""
-    j = np.uint64(first)        # an unsigned index needs no look whether it is negative
-    x = (np.uint64(row[j]) | np.uint64(row[j + np.uint64(1)]) << np.uint64(8)
-         | np.uint64(row[j + np.uint64(2)]) << np.uint64(16) | np.uint64(row[j + np.uint64(3)]) << np.uint64(24)
-         | np.uint64(row[j + np.uint64(4)]) << np.uint64(32) | np.uint64(row[j + np.uint64(5)]) << np.uint64(40)
-         | np.uint64(row[j + np.uint64(6)]) << np.uint64(48) | np.uint64(row[j + np.uint64(7)]) << np.uint64(56))
+    j, one = np.uint64(first), np.uint64(1)     # an unsigned index needs no look whether it is negative
+    x = (np.uint64(row[j])
+         | np.uint64(row[j + one]) << np.uint64(8)
+         | np.uint64(row[j + np.uint64(2)]) << np.uint64(16)
+         | np.uint64(row[j + np.uint64(3)]) << np.uint64(24)
+         | np.uint64(row[j + np.uint64(4)]) << np.uint64(32)
+         | np.uint64(row[j + np.uint64(5)]) << np.uint64(40)
+         | np.uint64(row[j + np.uint64(6)]) << np.uint64(48)
+         | np.uint64(row[j + np.uint64(7)]) << np.uint64(56))
     return (x * np.uint64(0x8040201008040201)) >> np.uint64(56)
 
 
@@ -42,14 +46,15 @@ def syndromes_of(bits: NDArray[np.uint8], n: int, tables: NDArray[np.uint64]) ->
 
 
 @njit(cache=True, nogil=True)
-def _leader(s: np.uint64, syndromes: NDArray[np.uint64], weights: NDArray[np.int8]) -> int:
+def _leader(s: np.uint64, syndromes: NDArray[np.uint64], weights: NDArray[np.int8]) -> np.int64:
     """Return the table row of the error pattern with this syndrome, -1: none."""
+    none = np.int64(-1)
     at = np.int64(s)
     if len(syndromes):
-        at = np.searchsorted(syndromes, s)
+        at = np.int64(np.searchsorted(syndromes, s))
         if at >= len(syndromes) or syndromes[at] != s:
-            return -1
-    return at if weights[at] >= 0 else -1
+            return none
+    return at if weights[at] >= 0 else none
 
 
 @njit(cache=True, nogil=True)
@@ -91,7 +96,7 @@ def repair(
                     continue
                 fewest = 2 * weights[best]
             else:
-                best, fill, fewest = -1, 0, reach + 1
+                best, fill, fewest = np.int64(-1), 0, reach + 1
                 all_erased = np.uint64(0)
                 for j in range(n):
                     if doubt[i, at + j] == 255:

@@ -49,6 +49,11 @@ class BlockCheck(Step):
                                  fix="leave skip and cover out")
 
     @property
+    def octets(self) -> bool:
+        """True when the check is defined for whole octets only."""
+        return True
+
+    @property
     @abstractmethod
     def check_bits(self) -> int:
         """Number of check bits per block."""
@@ -68,7 +73,14 @@ class BlockCheck(Step):
             begin, size = begin + size, self.every * 8
 
     def coded_bits(self, k: int) -> int:
-        return k + self.check_bits * sum(1 for _ in self._blocks(k))
+        n = k
+        for begin, end in self._blocks(k):
+            covered = max(end - begin - self.skip, 0)
+            covered = min(covered, self.cover) if self.cover else covered
+            if self.octets and covered % 8:
+                raise LengthError(f"{self.name} covers {covered} bits, which are no whole octets")
+            n += self.check_bits
+        return n
 
     def data_bits(self, n: int) -> int:
         if not self.every:
@@ -87,6 +99,7 @@ class BlockCheck(Step):
         return self.compute(covered)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
+        self.coded_bits(data.shape[1])
         parts = []
         for begin, end in self._blocks(data.shape[1]):
             block = data[:, begin:end]
@@ -117,7 +130,8 @@ class BlockCheck(Step):
             k = self.data_bits(batch.bits.shape[1])
         except LengthError:
             return too_short(batch)
-        out = whole(batch, self._data(batch.bits, k), None if batch.doubt is None else self._data(batch.doubt, k))
+        doubt = None if batch.doubt is None else self._data(batch.doubt, k)
+        out = whole(batch, self._data(batch.bits, k), doubt)
         for data, check in self._cut(batch.bits, k):
             out.fault[(self._check_of(data) != check).any(axis=1)] = CHECK_FAILED
         return out

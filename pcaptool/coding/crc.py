@@ -1,6 +1,7 @@
 """Cyclic redundancy checks of any width from 1 to 64 bits."""
 
 from dataclasses import dataclass
+from difflib import get_close_matches
 from functools import lru_cache
 from typing import Annotated, ClassVar, Literal
 
@@ -13,14 +14,15 @@ from pcaptool.coding.bits import bits_from_numbers
 from pcaptool.coding.blocks import BlockCheck
 from pcaptool.coding.crc_kernel import run, tables, to_register
 from pcaptool.coding.crc_standards import STANDARDS, CrcCode
-from pcaptool.coding.step import Bits, ParameterError
+from pcaptool.coding.step import Bits, LengthError, ParameterError
 
 __all__ = ["STANDARDS", "Crc", "CrcCode", "crc", "crc_bit_by_bit", "crc_of_bits"]
 
 
 @lru_cache(maxsize=64)
 def _compiled(code: CrcCode) -> tuple[NDArray[np.uint64], np.uint64]:
-    return tables(code.width, code.poly, code.refin), np.uint64(to_register(code.init, code.width, code.refin))
+    init = to_register(code.init, code.width, code.refin)
+    return tables(code.width, code.poly, code.refin), np.uint64(init)
 
 
 def _finish(register: NDArray[np.uint64], code: CrcCode) -> NDArray[np.uint64]:
@@ -70,11 +72,13 @@ def crc_bit_by_bit(data: bytes, code: CrcCode) -> int:
 def crc_of_bits(bits: Bits, code: CrcCode) -> NDArray[np.uint64]:
     """Return the CRC of frames of bits in the order sent, octets most significant bit first.
 
-    bits  uint8 (frame, bit); whole octets go through the kernel, up to 7 bits behind them one by one,
-    which for a reflected code needs whole octets (the order of bits within one is its own)
+    bits  uint8 (frame, bit); bits behind the last whole octet enter one by one
+    Raises LengthError for such bits where the code is reflected: it orders bits within octets.
     """
     n, width = bits.shape
     octets = width // 8
+    if width % 8 and code.refin:
+        raise LengthError(f"a reflected CRC of {width} bits, which are no whole octets")
     t, init = _compiled(code)
     register = run(np.packbits(bits[:, : octets * 8], axis=1), np.full(n, octets, np.int64), t, init)
     if width % 8:
@@ -100,14 +104,18 @@ class Crc(BlockCheck):
     refout: Annotated[bool, Doc("the final register is reversed")] = False
     xorout: Annotated[int, Ge(0), Doc("applied to the register at the end")] = 0
     order: Annotated[Literal["big", "little", ""],
-                     Doc("order of the check octets; default little for a reflected code, else big")] = ""
+                     Doc("order of the check octets, of the check bits where the width is no multiple of 8; "
+                         "default little for a reflected code, else big")] = ""
 
     def __post_init__(self) -> None:
         BlockCheck.__post_init__(self)
         if self.standard:
             if self.standard not in STANDARDS:
-                raise ParameterError("standard", found=repr(self.standard), expected="one of " + ", ".join(STANDARDS),
-                                     fix="take a name from the list, or give width, poly, init, refin, refout, xorout")
+                near = get_close_matches(self.standard, STANDARDS, n=1)
+                fix = f'did you mean "{near[0]}"?' if near else "give width, poly, init and so on"
+                raise ParameterError(
+                    "standard", found=repr(self.standard), expected="one of " + ", ".join(STANDARDS),
+                    fix=fix)
             if self.width or self.poly or self.init or self.xorout or self.refin or self.refout:
                 raise ParameterError("standard", found="standard and numbers", expected="one of them",
                                      fix="leave out width, poly, init, refin, refout and xorout")
@@ -116,9 +124,13 @@ class Crc(BlockCheck):
             raise ParameterError("width", found="no width", expected="a standard, or width and poly",
                                  fix='set standard = "..." or width and poly')
         for key in ("poly", "init", "xorout"):
-            if getattr(self, key) >> self.width:
-                raise ParameterError(key, found=hex(getattr(self, key)), expected=f"at most {self.width} bits",
+            value = getattr(self, key)
+            if value >> self.width:
+                raise ParameterError(key, found=hex(value), expected=f"at most {self.width} bits",
                                      fix="drop the top term of the polynomial, or set a larger width")
+        if not self.poly & 1:
+            raise ParameterError("poly", found=hex(self.poly), expected="a polynomial with the term 1",
+                                 fix="write it unreflected, top term dropped: 0x07 for x^8 + x^2 + x + 1")
 
     @property
     def code(self) -> CrcCode:
@@ -130,10 +142,17 @@ class Crc(BlockCheck):
     def check_bits(self) -> int:
         return self.code.width
 
+    @property
+    def octets(self) -> bool:
+        return self.code.refin
+
     def compute(self, data: Bits) -> Bits:
         code = self.code
         value = crc_of_bits(data, code)
-        order = self.order or ("little" if code.refout else "big")
-        if order == "little" and code.width % 8 == 0:
-            value = value.byteswap() >> np.uint64(64 - code.width)
+        if (self.order or ("little" if code.refout else "big")) == "little":
+            value = _octets_reversed(value, code.width)
         return bits_from_numbers(value, code.width)
+
+
+def _octets_reversed(value: NDArray[np.uint64], width: int) -> NDArray[np.uint64]:
+    return _reflected(value, width) if width % 8 else value.byteswap() >> np.uint64(64 - width)

@@ -61,10 +61,11 @@ def _load(frame: NDArray[np.uint8], j: int) -> np.uint64:
 @njit(cache=True, nogil=True)
 def _slice(t: NDArray[np.uint64], s: int, r: np.uint64) -> np.uint64:
     """Return what eight bytes, s bytes before the end of the step, add to the register."""
-    return (((t[s + 7, np.uint8(r)] ^ t[s + 6, np.uint8(r >> np.uint64(8))])
-             ^ (t[s + 5, np.uint8(r >> np.uint64(16))] ^ t[s + 4, np.uint8(r >> np.uint64(24))]))
-            ^ ((t[s + 3, np.uint8(r >> np.uint64(32))] ^ t[s + 2, np.uint8(r >> np.uint64(40))])
-               ^ (t[s + 1, np.uint8(r >> np.uint64(48))] ^ t[s, np.uint8(r >> np.uint64(56))])))
+    added: np.uint64 = (((t[s + 7, np.uint8(r)] ^ t[s + 6, np.uint8(r >> np.uint64(8))])
+                         ^ (t[s + 5, np.uint8(r >> np.uint64(16))] ^ t[s + 4, np.uint8(r >> np.uint64(24))]))
+                        ^ ((t[s + 3, np.uint8(r >> np.uint64(32))] ^ t[s + 2, np.uint8(r >> np.uint64(40))])
+                           ^ (t[s + 1, np.uint8(r >> np.uint64(48))] ^ t[s, np.uint8(r >> np.uint64(56))])))
+    return added
 
 
 @njit(cache=True, nogil=True)

@@ -45,7 +45,7 @@ def _code(n: int, k: int, extended: bool, positional: bool) -> LinearCode:
     if extended:
         parity = generator.sum(axis=1, dtype=np.uint8)[:, None] & 1
         generator = np.concatenate([generator, parity], axis=1)
-    return linear_code(generator, 1)
+    return linear_code(generator, 1, 4 if extended else 3)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -54,28 +54,33 @@ class Hamming(BlockStep):
 
     name: ClassVar[str] = "hamming"
 
-    n: Annotated[int, Ge(3), Le(64), Doc("bits of a codeword")]
-    k: Annotated[int, Ge(1), Le(57), Doc("data bits of a codeword")]
+    n: Annotated[int, Ge(3), Le(512), Doc("bits of a codeword, the overall parity bit included")]
+    k: Annotated[int, Ge(1), Le(501), Doc("data bits of a codeword")]
     extended: Annotated[bool, Doc("an overall parity bit stands behind the codeword")] = False
     layout: Annotated[Literal["positional", "systematic"],
-                      Doc("positional: check bits at positions 1, 2, 4 ...; systematic: behind the data")
-                      ] = "positional"
+                      Doc("positional: check bits at positions 1, 2, 4 ...; systematic: behind the data, "
+                          "that of position 1 first")] = "positional"
 
     def __post_init__(self) -> None:
-        if self.k >= self.n:
-            raise ParameterError("k", found=str(self.k), expected=f"less than n = {self.n}", fix="swap or lower k")
-        r = self.n - self.k - self.extended
         need = check_bits_for(self.k)
-        if r == need or (r > need and 2 ** (r - 1) <= self.n):
+        right = self.k + need + self.extended
+        if self.n == right:
             return
-        k = next(k for k in range(self.n - 1, 0, -1) if k + check_bits_for(k) + self.extended <= self.n)
-        extra = " and 1 for the overall parity" if self.extended else ""
-        r_right = self.n - k - self.extended
+        also = " and 1 overall parity bit" if self.extended else ""
+        fitting = (k for k in range(1, self.n) if k + check_bits_for(k) + self.extended == self.n)
+        best = next(fitting, 0)
+        if best:
+            r = check_bits_for(best)
+            raise ParameterError(
+                "k", found=str(self.k),
+                expected=f"{best} (n = {self.n} needs {r} check bits{also}, since 2**{r} >= {best + r} + 1)",
+                fix=f"set k = {best}, or n = {right}")
+        other = "" if self.extended or self.n != right + 1 else ", or extended = true"
         raise ParameterError(
-            "k", found=str(self.k),
-            expected=f"{k} (n = {self.n} needs {r_right} check bits{extra}, "
-                     f"since 2**{r_right} >= {self.n - self.extended} + 1)",
-            fix=f"set k = {k}, or n = {self.k + need + self.extended}")
+            "n", found=str(self.n),
+            expected=f"{right} (k = {self.k} needs {need} check bits{also}, "
+                     f"since 2**{need} >= {self.k + need} + 1)",
+            fix=f"set n = {right}{other}")
 
     @property
     def code(self) -> LinearCode:

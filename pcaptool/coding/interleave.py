@@ -27,7 +27,8 @@ from pcaptool.coding.step import (
 @lru_cache(maxsize=256)
 def _positions(order: tuple[int, ...], unit: int, n: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Return (bit of the data that place j on the air carries, the inverse) for words of n bits."""
-    symbols = (np.array(order)[None, :] + len(order) * np.arange(n // (unit * len(order)))[:, None]).reshape(-1)
+    blocks = np.arange(n // (unit * len(order)))
+    symbols = (np.array(order) + len(order) * blocks[:, None]).reshape(-1)
     forward = (symbols[:, None] * unit + np.arange(unit)).reshape(-1)
     return forward, np.argsort(forward)
 
@@ -64,10 +65,8 @@ class Interleave(Step):
     @property
     def sent(self) -> tuple[int, ...]:
         """The symbol sent at every place of a block."""
-        if self.order:
-            return self.order
-        return tuple(range(self.rows * self.columns)) if 1 in (self.rows, self.columns) else tuple(
-            int(v) for v in np.arange(self.rows * self.columns).reshape(self.rows, self.columns).T.reshape(-1))
+        return self.order or tuple(
+            row * self.columns + column for column in range(self.columns) for row in range(self.rows))
 
     @property
     def block(self) -> int:
@@ -79,7 +78,8 @@ class Interleave(Step):
             raise LengthError(f"{k} bits are no whole number of interleaver blocks of {self.block} bits")
         return k
 
-    data_bits = coded_bits
+    def data_bits(self, n: int) -> int:
+        return self.coded_bits(n)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         self.coded_bits(data.shape[1])

@@ -7,7 +7,7 @@ import numpy as np
 from annotated_types import Ge, Le
 from typing_extensions import Doc
 
-from pcaptool.coding.bits import bits_from_numbers, numbers_of
+from pcaptool.coding.bits import bits_of, numbers_of
 from pcaptool.coding.step import (
     NO_CONTEXT,
     SHORT,
@@ -53,10 +53,9 @@ class Length(Step):
         return n - self.bits
 
     def _field(self, value: int) -> Bits:
-        octets = np.array([value], np.uint64)
         if self.order == "little":
-            octets = np.array([int.from_bytes(value.to_bytes(self.bits // 8, "little"), "big")], np.uint64)
-        return bits_from_numbers(octets, self.bits)[0]
+            value = int.from_bytes(value.to_bytes(self.bits // 8, "little"), "big")
+        return bits_of(value, self.bits)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         self.coded_bits(data.shape[1])

@@ -10,7 +10,16 @@ from numpy.typing import NDArray
 from pcaptool.coding.bits import take_columns
 from pcaptool.coding.block_kernel import multiply, repair, syndromes_of
 from pcaptool.coding.differences import count_differences
-from pcaptool.coding.step import UNCORRECTABLE, Batch, Bits, Decoded, LengthError, ParameterError, too_short, whole
+from pcaptool.coding.step import (
+    UNCORRECTABLE,
+    Batch,
+    Bits,
+    Decoded,
+    LengthError,
+    ParameterError,
+    too_short,
+    whole,
+)
 
 LARGEST_TABLE = 1 << 20
 DENSE = 16              # check bits up to which patterns are looked up by the syndrome itself
@@ -114,11 +123,11 @@ class LinearCode:
 
     @property
     def n(self) -> int:
-        return self.generator.shape[1]
+        return int(self.generator.shape[1])
 
     @property
     def k(self) -> int:
-        return self.generator.shape[0]
+        return int(self.generator.shape[0])
 
     def coded_bits(self, k: int) -> int:
         if k % self.k or not k:
@@ -162,7 +171,9 @@ class LinearCode:
         return out
 
 
-def linear_code(generator: NDArray[np.uint8], t: int | None = None, distance: int | None = None) -> LinearCode:
+def linear_code(
+    generator: NDArray[np.uint8], t: int | None = None, distance: int | None = None
+) -> LinearCode:
     """Return the code of a generator matrix (k, n); t None: all errors that its distance allows.
 
     distance  least distance, where it is known
@@ -171,7 +182,7 @@ def linear_code(generator: NDArray[np.uint8], t: int | None = None, distance: in
     """
     k, n = generator.shape
     reduced, pivots, transform = reduce_rows(generator)
-    if len(pivots) < k or n == k:
+    if len(pivots) < k or k in (0, n):
         raise ParameterError(
             "generator", found=f"{k} rows of rank {len(pivots)} and {n} columns",
             expected="independent rows, fewer than columns", fix="take out rows that are sums of others")
@@ -212,7 +223,8 @@ def linear_code(generator: NDArray[np.uint8], t: int | None = None, distance: in
 def _columns(generator: NDArray[np.uint8]) -> NDArray[np.uint64]:
     h = parity_check(generator)
     shift = np.arange(len(h), dtype=np.uint64)
-    return np.bitwise_or.reduce(h.T.astype(np.uint64) << shift, axis=1)
+    columns: NDArray[np.uint64] = np.bitwise_or.reduce(h.T.astype(np.uint64) << shift, axis=1)
+    return columns
 
 
 def _patterns(columns: NDArray[np.uint64], r: int, t: int
@@ -221,7 +233,8 @@ def _patterns(columns: NDArray[np.uint64], r: int, t: int
     n = len(columns)
     size = sum(comb(n, w) for w in range(t + 1))
     if size > LARGEST_TABLE:
-        raise ParameterError("t", found=str(t), expected=f"at most {LARGEST_TABLE} patterns of errors, not {size}",
+        raise ParameterError("t", found=str(t),
+                             expected=f"at most {LARGEST_TABLE} patterns of errors, not {size}",
                              fix="set a lower t; what it does not correct is still found")
     all_syndromes = [np.zeros(1, np.uint64)]
     all_leaders = [np.full((1, t), -1, np.int16)]

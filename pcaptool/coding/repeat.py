@@ -4,7 +4,7 @@ from dataclasses import dataclass
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
-from annotated_types import Ge
+from annotated_types import Ge, Le
 from numpy.typing import NDArray
 from typing_extensions import Doc
 
@@ -29,8 +29,9 @@ class Repeat(Step):
     name: ClassVar[str] = "repeat"
     role = "code"
 
-    times: Annotated[int, Ge(2), Doc("copies sent")]
-    order: Annotated[Literal["bit", "word"], Doc("bit: each bit at once; word: the word again and again")] = "bit"
+    times: Annotated[int, Ge(2), Le(255), Doc("copies sent")]
+    order: Annotated[Literal["bit", "word"],
+                     Doc("bit: each bit at once; word: the whole word again and again")] = "bit"
 
     def coded_bits(self, k: int) -> int:
         return k * self.times
@@ -58,14 +59,18 @@ class Repeat(Step):
         if batch.bits.shape[1] % self.times:
             return too_short(batch)
         copies = self._copies(batch.bits)
-        votes = np.ones_like(copies) if batch.doubt is None else (self._copies(batch.doubt) < 255).astype(np.uint8)
+        votes = np.ones_like(copies)
+        if batch.doubt is not None:
+            votes = (self._copies(batch.doubt) < 255).astype(np.uint8)
         ones = (copies & votes).sum(axis=1, dtype=np.int32)
         cast = votes.sum(axis=1, dtype=np.int32)
         out = whole(batch, (2 * ones > cast).astype(np.uint8))
-        out.fault[(2 * ones == cast).any(axis=1)] = UNCORRECTABLE
-        wrong = ((copies != out.bits[:, None]) & (votes > 0)).sum(axis=1, dtype=np.int32)
-        out.repaired[:] = wrong.sum(axis=1)
-        t = (self.times - 1) // 2
-        worst = wrong.max(axis=1, initial=0)
-        out.headroom = (1 - worst / max(t, 1)).astype(np.float32)
+        tie = (2 * ones == cast).any(axis=1)
+        out.fault[tie] = UNCORRECTABLE
+        out.repaired[:] = (copies != out.bits[:, None]).sum(axis=(1, 2))
+        errors = np.minimum(ones, cast - ones)
+        spent = (2 * errors + self.times - cast).max(axis=1, initial=0)
+        left = np.maximum(1 - spent / (2 * max((self.times - 1) // 2, 1)), 0).astype(np.float32)
+        left[tie] = 0
+        out.headroom = left if self.times > 2 else None
         return out

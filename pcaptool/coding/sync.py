@@ -20,6 +20,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.sync_kernel import find_word
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -46,7 +47,8 @@ class Sync(Step):
             raise ParameterError("word", found=repr(self.word), expected='hex octets or "0b" and bits',
                                  fix='write for example "1ACFFC1D" or "0b11100010010"')
         if 2 * self.tolerate >= size:
-            raise ParameterError("tolerate", found=str(self.tolerate), expected=f"less than half of {size} bits",
+            raise ParameterError("tolerate", found=str(self.tolerate),
+                                 expected=f"less than half of {size} bits",
                                  fix=f"set at most {(size - 1) // 2}")
 
     @property
@@ -75,15 +77,12 @@ class Sync(Step):
 
     def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
         frames, width = batch.bits.shape
-        pattern = self.pattern
-        size = len(pattern)
+        size = len(self.pattern)
         if width < size:
             return too_short(batch)
         places = min(self.within, width - size) + 1
-        wrong = np.stack([(batch.bits[:, p : p + size] != pattern).sum(axis=1) for p in range(places)], axis=1)
-        best = wrong.argmin(axis=1)
-        errors = wrong[np.arange(frames), best]
-        missed = errors > self.tolerate
+        best, errors = find_word(np.ascontiguousarray(batch.bits), self.pattern, places, self.tolerate)
+        missed = best < 0
         best[missed] = 0
         if not best.any():
             out = whole(batch, batch.bits[:, size:], None if batch.doubt is None else batch.doubt[:, size:])
@@ -98,8 +97,8 @@ class Sync(Step):
                 side[rows, :place] = batch.bits[rows, :place]
                 if doubt is not None and batch.doubt is not None:
                     doubt[rows, :length] = batch.doubt[rows, place + size :]
-            out = whole(batch, data, doubt, side=side, side_length=best.astype(np.int64))
-            out.length = (width - size - best).astype(np.int64)
-        out.repaired[:] = np.where(missed, 0, errors)
+            out = whole(batch, data, doubt, side=side, side_length=best)
+            out.length = width - size - best
+        out.repaired[:] = errors
         out.fault[missed] = CHECK_FAILED
         return out

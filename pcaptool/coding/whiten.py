@@ -6,7 +6,7 @@ from functools import lru_cache
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
-from annotated_types import Ge
+from annotated_types import Ge, Le
 from numpy.typing import NDArray
 from typing_extensions import Doc
 
@@ -32,6 +32,9 @@ def delays_of(poly: str | int) -> tuple[int, ...]:
     else:
         exponents = [j for j in range(poly.bit_length()) if poly >> j & 1]
     degree = max(exponents, default=0)
+    if degree > 63:
+        raise ParameterError("poly", found=f"degree {degree}", expected="a degree of at most 63",
+                             fix="check the highest term, or give the sequence itself")
     if degree < 1 or 0 not in exponents:
         raise ParameterError("poly", found=repr(poly), expected="a highest term x^m and the constant 1",
                              fix='write both ends, as in "x^9 + x^5 + 1"')
@@ -88,13 +91,13 @@ class Whiten(Step):
     poly: Annotated[str | int, Doc('recurrence, "x^9 + x^5 + 1" or one bit per term')] = 0
     seed: Annotated[int, Ge(0), Doc("register; see form for its meaning")] = 0
     form: Annotated[Literal["first bits", "history", "galois"],
-                        Doc('"first bits": the sequence begins with the seed, most significant bit first; '
-                            '"history": the seed holds the bits before the first, most significant the latest; '
-                            '"galois": the seed is the register x^0 .. x^(m-1), most significant bit x^0, '
-                            "and the bit that leaves is added at every term")] = "first bits"
+                    Doc('"first bits": the sequence begins with the seed, most significant bit first; '
+                        '"history": the seed holds the bits before the first, its highest the latest; '
+                        '"galois": the seed is the register x^0 .. x^(m-1), most significant bit x^0, '
+                        "and the bit that leaves is added at every term")] = "first bits"
     reciprocal: Annotated[bool, Doc("run the recurrence of the reversed polynomial")] = False
     pack: Annotated[Literal["msb", "lsb"], Doc("where each octet's first sequence bit goes")] = "msb"
-    skip_sequence: Annotated[int, Ge(0), Doc("sequence bits thrown away at the start")] = 0
+    skip_sequence: Annotated[int, Ge(0), Le(1 << 20), Doc("sequence bits thrown away at the start")] = 0
     invert: Annotated[bool, Doc("invert the sequence")] = False
     sequence: Annotated[str, Doc("fixed octets in hex, repeated, instead of poly and seed")] = ""
     seed_from: Annotated[str, Doc('wrapper field that is added (XOR) to the seed, "wrapper.NAME"')] = ""
@@ -163,15 +166,19 @@ class Whiten(Step):
         bits = bits[:length] ^ np.uint8(self.invert)
         return np.concatenate([np.zeros(min(self.skip, n), np.uint8), bits])
 
+    def _masks(self, n: int, seeds: NDArray[np.int64]) -> Bits:
+        """Return the mask of every seed, uint8 (seed, n): the sum of the masks of the seed's bits."""
+        zero = self.mask(n, 0)
+        masks = np.repeat(zero[None], len(seeds), axis=0)
+        for j in range(max(delays_of(self.poly))):
+            masks[(seeds >> j & 1) == 1] ^= self.mask(n, 1 << j) ^ zero
+        return masks
+
     def _add(self, bits: Bits, context: Context) -> Bits:
         if not self.seed_from:
             return bits ^ self.mask(bits.shape[1], self.seed)
-        out = bits.copy()
-        seeds: NDArray[np.int64] = context[self.needs[0]]
-        for seed in np.unique(seeds):
-            rows = seeds == seed
-            out[rows] ^= self.mask(bits.shape[1], int(seed) ^ self.seed)
-        return out
+        seeds, seed_of = np.unique(context[self.needs[0]] ^ self.seed, return_inverse=True)
+        return bits ^ self._masks(bits.shape[1], seeds)[seed_of]
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         return self._add(data, context)

@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pcaptool.frames.keys import KeyMaker
-from pcaptool.frames.table import NO_KEY
+from pcaptool.frames.table import NO_COUNTER, NO_KEY
 from pcaptool.links.arrival import GAP, LINK_STATE, SAMPLES, find_copies, follow, new_links
 from pcaptool.links.bins import Bins
 from pcaptool.links.numbering import Numbering
@@ -116,20 +116,23 @@ class LinkFollower:
         known  keys with a usable frame anywhere in the audit, where a link's key needs the message
         """
         profile = self.profiles[f.profile]
-        who = self._number(f, known)
-        arrival = self.links.follow(who, f, f.counter, f.state)
+        who, home = self._number(f, known)
+        counter = np.where(home, NO_COUNTER, f.counter) if home.any() else f.counter
+        arrival = self.links.follow(who, f, counter, f.state)
         if profile.backhaul:
             self._backhaul(f, who)
         self.bins.add(who, f.state, f.headroom, f.time, len(self.links))
         return who, arrival
 
-    def _number(self, f: FrameSlice, known: Numbering | None) -> NDArray[np.int64]:
+    def _number(self, f: FrameSlice, known: Numbering | None) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+        """Return (link of every frame, whether that is only the home of frames of no known link)."""
         profile = self.profiles[f.profile]
         key = f.key
         if known is not None:
             lost = (f.state >= 2) & ((key == NO_KEY) | (known.find(key) < 0))
             key = np.where(lost, f.home | np.uint64(HOME), key)
         key = np.where(key == NO_KEY, f.home | np.uint64(HOME), key)
+        home = (key & np.uint64(HOME)) != 0
         counter = profile.counter
         rows = self._rows(f.profile, key, self.numbering, self.link_of, self.links,
                           counter.modulo if counter else 0, counter.window if counter else 16,
@@ -137,7 +140,7 @@ class LinkFollower:
         while len(self.identity) < len(self.links):
             self.identity.append((f.profile, self.numbering[f.profile].keys[
                 int(np.flatnonzero(self.link_of[f.profile] == len(self.identity))[0])]))
-        return rows
+        return rows, home
 
     def _rows(self, profile: int, key: NDArray[np.uint64], numbering: list[Numbering],
               row_of: list[NDArray[np.int64]], counted: Counted, modulo: int, window: int, interval: int,
