@@ -8,6 +8,9 @@ from pcaptool.profile import Profile
 def judge(links: Sequence[dict[str, object]], profiles: Mapping[str, Profile]) -> None:
     """Set the verdict of every link; a home of corrupted frames has none of its own."""
     for row in links:
+        if "?" in str(row["link"]).split("/"):
+            row["verdict"] = "frames of no known link"
+            continue
         limits = profiles[str(row["profile"])].limits
         over = []
         for key, name in (("lost_percent", "lost"), ("corrupted_percent", "corrupted")):

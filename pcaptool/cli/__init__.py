@@ -90,7 +90,8 @@ def main() -> None:
     os.environ.setdefault("NUMBA_CACHE_DIR", str(kernel_folder()))
     status = 0
     try:
-        cli.main(standalone_mode=False)
+        returned = cli.main(standalone_mode=False)
+        status = returned if isinstance(returned, int) else 0
     except click.exceptions.Exit as stop:
         status = stop.exit_code
     except click.ClickException as error:

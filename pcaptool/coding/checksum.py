@@ -60,7 +60,7 @@ def iso_fletcher(octets: NDArray[np.int64]) -> NDArray[np.int64]:
 def adler32(octets: NDArray[np.int64]) -> NDArray[np.int64]:
     """Return Adler-32. Source: RFC 1950, section 9."""
     n = octets.shape[1]
-    a = (1 + octets.sum(axis=1)) % 65521
+    a: NDArray[np.int64] = (1 + octets.sum(axis=1)) % 65521
     b: NDArray[np.int64] = (n + (octets * np.arange(n, 0, -1)).sum(axis=1)) % 65521
     return b << 16 | a
 

@@ -72,7 +72,7 @@ class Length(Step):
             return too_short(batch)
         field = batch.bits[:, : self.bits]
         if self.order == "little":
-            field = field.reshape(frames, -1, 8)[:, ::-1].reshape(frames, self.bits)
+            field = field.reshape(frames, self.bits // 8, 8)[:, ::-1].reshape(frames, self.bits)
         length = (numbers_of(field).astype(np.int64) - self.plus) * self.unit
         rest = batch.bits[:, self.bits :]
         doubt = None if batch.doubt is None else batch.doubt[:, self.bits :]

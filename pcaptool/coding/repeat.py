@@ -43,10 +43,10 @@ class Repeat(Step):
 
     def _copies(self, word: NDArray[np.uint8]) -> NDArray[np.uint8]:
         """Return uint8 (frame, copy, bit)."""
-        n = len(word)
+        n, k = len(word), word.shape[1] // self.times
         if self.order == "word":
-            return word.reshape(n, self.times, -1)
-        return word.reshape(n, -1, self.times).swapaxes(1, 2)
+            return word.reshape(n, self.times, k)
+        return word.reshape(n, k, self.times).swapaxes(1, 2)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         return np.tile(data, self.times) if self.order == "word" else np.repeat(data, self.times, axis=1)

@@ -93,6 +93,37 @@ def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int
     return delta, IN_TURN, BY_COUNTER
 
 
+IN_PHASE, OUT_OF_PHASE, DISTINCT = 0.15, 0.3, 0.05    # of the interval
+
+
+@njit(cache=True, nogil=True)
+def whose(
+    claimed: int, group: int, order: int, links: NDArray[np.void], link_group: NDArray[np.int64]
+) -> int:
+    """Return the link that a damaged frame of a group most likely belongs to.
+
+    claimed  the link that its damaged key names, or the group's home for frames of no known link
+    The damaged key is believed unless the frame comes out of phase with that link and in phase with
+    exactly one other of the group: a whole number of intervals after its latest usable frame.
+    """
+    best, best_off, second_off = -1, 1.0, 1.0
+    claimed_off = 1.0
+    for i in range(len(link_group)):
+        if link_group[i] != group or links[i].interval <= 0 or links[i].extended < 0:
+            continue
+        passed = (order - links[i].time) / links[i].interval
+        off = abs(passed - max(np.round(passed), 1.0))
+        if i == claimed:
+            claimed_off = off
+        if off < best_off:
+            best, best_off, second_off = i, off, best_off
+        elif off < second_off:
+            second_off = off
+    if claimed_off <= OUT_OF_PHASE or best < 0:
+        return claimed
+    return best if best_off <= IN_PHASE and second_off > 2 * best_off + DISTINCT else claimed
+
+
 @njit(cache=True, nogil=True)
 def follow(
     link: NDArray[np.int64], counter: NDArray[np.int64], state: NDArray[np.uint8], order: NDArray[np.int64],
@@ -100,17 +131,19 @@ def follow(
     air_bits: NDArray[np.int32],
     links: NDArray[np.void], seen: NDArray[np.bool_], samples: NDArray[np.int64],
     modulo: NDArray[np.int64], window: NDArray[np.int64], verifies: NDArray[np.bool_], gaps: NDArray[np.void],
-    n_gaps: int, run: NDArray[np.int64],
+    n_gaps: int, run: NDArray[np.int64], group: NDArray[np.int64], link_group: NDArray[np.int64],
 ) -> tuple[NDArray[np.uint8], int]:
     """Advance the links by a batch of frames; return (arrival uint8 (frame,), gaps so far).
 
-    link     int64 (frame,)   -1: a frame to pass over
+    link     int64 (frame,)   -1: a frame to pass over; changed where ``whose`` knows better
     links    LINK_STATE (link,)      changed
     seen     bool (link, slot)       the last extended counters that came, by counter % slots; changed
     samples  int64 (link, SAMPLES)   intervals seen; changed
     modulo, window, verifies  (link,) of the link's profile
     gaps     GAP (gap,)  filled from n_gaps on; must have room for one more gap per frame
     run      int64 (link,)  number of the run; changed
+    group    int64 (frame,) or empty: links among which a damaged frame of that group may belong
+    link_group  int64 (link,)  group of every link
     """
     arrival = np.zeros(len(link), np.uint8)
     slots = seen.shape[1]
@@ -118,6 +151,8 @@ def follow(
         who = link[i]
         if who < 0:
             continue
+        if state[i] >= 2 and len(group):
+            who = link[i] = whose(who, group[i], order[i], links, link_group)
         at = links[who]
         at.heard += 1
         if at.first_time == np.iinfo(np.int64).min:

@@ -16,6 +16,8 @@ from pcaptool.profile import Profile
 COPY_WINDOW = 1_000_000_000             # ns in which a datagram recorded again is a copy ...
 COPY_WINDOW_WITHOUT_IDENT = 1_000_000   # ... and when it has no IP identification
 BUCKETS, WAYS = 1 << 13, 8
+NO_GROUP = np.zeros(0, np.int64)
+MOST_HOMES = 1 << 32
 HOME = 1 << 63                          # marks the key of a link's home: frames of no known link
 
 
@@ -50,6 +52,7 @@ class Counted:
         self.window = np.zeros(0, np.int64)
         self.verifies = np.zeros(0, np.bool_)
         self.run = np.zeros(0, np.int64)
+        self.group = np.zeros(0, np.int64)      # links of one group share all of the key but the message's part
         self.gaps = np.zeros(1024, GAP)
         self.n_gaps = 0
 
@@ -72,17 +75,19 @@ class Counted:
             seen[: len(self.seen)] = self.seen
         self.seen = seen
         self.samples = np.concatenate([self.samples, np.zeros((new, SAMPLES), np.int64)])
-        for name, value in (("modulo", modulo), ("window", window), ("run", 0)):
+        for name, value in (("modulo", modulo), ("window", window), ("run", 0), ("group", -1)):
             setattr(self, name, np.concatenate([getattr(self, name), np.full(new, value, np.int64)]))
         self.verifies = np.concatenate([self.verifies, np.full(new, verifies)])
 
     def follow(self, who: NDArray[np.int64], f: FrameSlice, counter: NDArray[np.int64],
-               state: NDArray[np.uint8]) -> NDArray[np.uint8]:
+               state: NDArray[np.uint8], group: NDArray[np.int64] = NO_GROUP) -> NDArray[np.uint8]:
+        """Advance by some frames and return their arrival; ``who`` is changed where a guess was mended."""
         while len(self.gaps) < self.n_gaps + len(who):
             self.gaps = np.concatenate([self.gaps, np.zeros(len(self.gaps), GAP)])
         arrival, self.n_gaps = follow(
             who, counter, state, f.order, f.time, f.wrong_bits, f.headroom, f.air_bits, self.states, self.seen,
-            self.samples, self.modulo, self.window, self.verifies, self.gaps, self.n_gaps, self.run)
+            self.samples, self.modulo, self.window, self.verifies, self.gaps, self.n_gaps, self.run, group,
+            self.group)
         return arrival
 
 
@@ -98,6 +103,7 @@ class LinkFollower:
         self.numbering = [Numbering() for _ in profiles]        # per profile: key -> row of link_of
         self.link_of: list[NDArray[np.int64]] = [np.zeros(0, np.int64) for _ in profiles]
         self.identity: list[tuple[int, int]] = []               # link -> (profile, key or HOME | home key)
+        self.homes = [Numbering() for _ in profiles]
         self.gateway_numbering = [Numbering() for _ in profiles]
         self.gateway_of: list[NDArray[np.int64]] = [np.zeros(0, np.int64) for _ in profiles]
         self.link_gateway = np.zeros(0, np.int64)               # the gateway that a link was last heard by
@@ -118,7 +124,12 @@ class LinkFollower:
         profile = self.profiles[f.profile]
         who, home = self._number(f, known)
         counter = np.where(home, NO_COUNTER, f.counter) if home.any() else f.counter
-        arrival = self.links.follow(who, f, counter, f.state)
+        group = NO_GROUP
+        if known is not None:
+            group = self.homes[f.profile].number(f.home) + f.profile * MOST_HOMES
+            sure = (f.state < 2) & ~home
+            self.links.group[who[sure]] = group[sure]
+        arrival = self.links.follow(who, f, counter, f.state, group)
         if profile.backhaul:
             self._backhaul(f, who)
         self.bins.add(who, f.state, f.headroom, f.time, len(self.links))

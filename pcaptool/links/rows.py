@@ -82,6 +82,8 @@ def link_rows(follower: LinkFollower, names: Sequence[str], gaps: Gaps) -> list[
     rows = []
     for i in sorted(range(n), key=lambda i: natural(names[i])):
         s = follower.links.states[i]
+        if not s["heard"]:
+            continue
         counted = s["extended"] >= 0
         usable = int(s["intact"] + s["corrected"])
         sent = usable - int(s["repeated"]) + int(s["corrupted"]) + int(s["short"]) + int(lost[i])
