@@ -42,6 +42,8 @@ if TYPE_CHECKING:
 
 
 def __getattr__(name: str) -> object:
+    if name in ("audit", "simulate"):
+        return import_module(f"pcaptool.{name}")
     if name in _WHERE:
         return getattr(import_module(_WHERE[name]), name)
     raise AttributeError(f"module 'pcaptool' has no attribute {name!r}")
@@ -51,12 +53,21 @@ def __dir__() -> list[str]:
     return sorted(__all__)
 
 
+class _Callable(ModuleType):
+    """A folder of the package whose name is also a function of the API: ``audit``, ``simulate``."""
+
+    def __call__(self, *args: object, **options: object) -> object:
+        name = self.__name__.rpartition(".")[2]
+        return getattr(import_module(_WHERE[name]), name)(*args, **options)
+
+
 class _Package(ModuleType):
-    """The package itself: ``audit`` and ``simulate`` are functions here, not the folders of that name."""
+    """The package itself; makes such folders callable when they are imported."""
 
     def __setattr__(self, name: str, value: object) -> None:
-        if not (name in _WHERE and isinstance(value, ModuleType)):
-            super().__setattr__(name, value)
+        if name in _WHERE and isinstance(value, ModuleType):
+            value.__class__ = _Callable
+        super().__setattr__(name, value)
 
 
 sys.modules[__name__].__class__ = _Package

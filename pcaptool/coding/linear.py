@@ -24,7 +24,9 @@ from pcaptool.coding.step import (
 LARGEST_TABLE = 1 << 20
 DENSE = 16              # check bits up to which patterns are looked up by the syndrome itself
 LISTED = 20             # codes of at most 2**LISTED words are listed to find their weights
+PIECE = 1024            # frames worked on at a time, so that they stay in the cache
 NO_TABLE = np.zeros((0, 0), np.uint8)
+ONES = np.array([byte.bit_count() for byte in range(256)], np.int32)
 
 
 def reduce_rows(matrix: NDArray[np.uint8]) -> tuple[NDArray[np.uint8], list[int], NDArray[np.uint8]]:
@@ -98,7 +100,7 @@ def _listed_weights(generator: NDArray[np.uint8]) -> dict[int, int]:
         octets = np.zeros(1, np.uint8)
         for row in column:
             octets = np.concatenate([octets, octets ^ row])
-        weight += np.bitwise_count(octets)
+        weight += ONES[octets]
     return {w: int(count) for w, count in enumerate(np.bincount(weight)) if count}
 
 
@@ -155,15 +157,21 @@ class LinearCode:
         frames, width = batch.bits.shape
         if width % self.n or not width:
             return too_short(batch)
-        word = np.array(batch.bits)
-        doubt = NO_TABLE if batch.doubt is None else np.ascontiguousarray(batch.doubt)
-        received = syndromes_of(word, self.n, self.tables)
-        spent, given_up = np.zeros(frames, np.int32), np.zeros(frames, np.bool_)
-        repair(word, doubt, self.n, received, self.columns, self.syndromes, self.leaders, self.weights,
-               self.reach, spent, given_up)
-        out = whole(batch, self.strip(word))
+        data = np.empty((frames, self.data_bits(width)), np.uint8)
+        repaired, spent = np.zeros(frames, np.int32), np.zeros(frames, np.int32)
+        given_up = np.zeros(frames, np.bool_)
+        for begin in range(0, frames, PIECE):
+            piece = slice(begin, begin + PIECE)
+            bits = np.ascontiguousarray(batch.bits[piece])
+            doubt = NO_TABLE if batch.doubt is None else np.ascontiguousarray(batch.doubt[piece])
+            word = bits.copy()
+            repair(word, doubt, self.n, syndromes_of(bits, self.n, self.tables), self.columns, self.syndromes,
+                   self.leaders, self.weights, self.reach, spent[piece], given_up[piece])
+            data[piece] = self.strip(word)
+            repaired[piece] = count_differences(word, bits)
+        out = whole(batch, data)
         out.fault[given_up] = UNCORRECTABLE
-        out.repaired[:] = count_differences(word, np.ascontiguousarray(batch.bits))
+        out.repaired[:] = repaired
         if self.t:
             left = np.maximum(1 - spent / (2 * self.t), 0).astype(np.float32)
             left[given_up] = 0

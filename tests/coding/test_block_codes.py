@@ -11,7 +11,7 @@ from published import bits, cyclic_generator, entries, text
 
 from pcaptool.coding.block_code import BlockCode
 from pcaptool.coding.hamming import Hamming
-from pcaptool.coding.linear import code_weights, parity_check
+from pcaptool.coding.linear import PIECE, code_weights, parity_check
 from pcaptool.coding.repeat import Repeat
 from pcaptool.coding.step import OK, SHORT, UNCORRECTABLE, Batch, ParameterError
 from pcaptool.coding.whiten import Whiten
@@ -265,3 +265,15 @@ def test_repetition_outvotes_errors_and_gives_up_ties(order):
 @pytest.mark.parametrize("step", [Hamming(n=12, k=8), Repeat(times=3), BlockCode(generator=GOLAY)])
 def test_a_length_that_no_word_has_is_short(step):
     assert step.decode(Batch(np.zeros((2, 25), np.uint8))).fault.tolist() == [SHORT, SHORT]
+
+
+def test_a_long_batch_gives_the_rows_of_its_parts():
+    """Decoding works through a batch in pieces; their seams must not show."""
+    step = Hamming(n=12, k=8)
+    words = np.random.default_rng(7).integers(0, 2, (2 * PIECE + 5, 36), np.uint8)
+    whole = step.decode(Batch(words))
+    for cut in (1, PIECE - 1, PIECE + 3):
+        for part in (slice(cut), slice(cut, None)):
+            some = step.decode(Batch(words[part]))
+            for field in ("bits", "fault", "repaired", "headroom"):
+                assert_array_equal(getattr(some, field), getattr(whole, field)[part])
