@@ -6,10 +6,11 @@ CSV is RFC 4180 with fixed columns and ``\n``: the same bytes everywhere, safe t
 import csv
 import io
 import os
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from datetime import UTC, datetime
+from functools import lru_cache
 from pathlib import Path
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 
 class Column(NamedTuple):
@@ -38,31 +39,35 @@ def defused(text: str) -> str:
 def time_text(ns: int) -> str:
     """Return a time as ISO 8601 in UTC with nanoseconds."""
     seconds, fraction = divmod(ns, 1_000_000_000)
-    return f"{datetime.fromtimestamp(seconds, UTC):%Y-%m-%dT%H:%M:%S}.{fraction:09d}Z"
+    return f"{_second(seconds)}.{fraction:09d}Z"
 
 
-def cell(column: Column, value: object) -> str:
-    """Return a value as the text of its cell; None is an empty cell."""
-    if value is None:
-        return ""
-    if isinstance(value, bool):
-        return "true" if value else "false"
-    if column.dtype == "timestamp" and isinstance(value, int):
-        return time_text(value)
-    if isinstance(value, int):
-        return str(value)
-    if isinstance(value, float):
-        return f"{value:.9g}" if column.unit == "s" else f"{value:.6g}"
-    return defused(str(value))
+@lru_cache(maxsize=4096)
+def _second(seconds: int) -> str:
+    return datetime.fromtimestamp(seconds, UTC).isoformat()[:19]
+
+
+def _text_of(column: Column) -> Callable[[Any], str]:
+    """Return what turns a value of a column, not None, into the text of its cell."""
+    match column.dtype:
+        case "timestamp":
+            return time_text
+        case "bool":
+            return lambda value: "true" if value else "false"
+        case "double" | "float":
+            return "{:.9g}".format if column.unit == "s" else "{:.6g}".format
+        case "string" | "label":
+            return lambda value: defused(str(value))
+    return str
 
 
 def csv_text(columns: Sequence[Column], rows: Iterable[Mapping[str, object]]) -> str:
-    """Return a small table as CSV."""
+    """Return a small table as CSV; None is an empty cell."""
     text = io.StringIO(newline="")
     writer = csv.writer(text, lineterminator="\n")
     writer.writerow([c.name for c in columns])
-    for row in rows:
-        writer.writerow([cell(c, row[c.name]) for c in columns])
+    makers = [(c.name, _text_of(c)) for c in columns]
+    writer.writerows([["" if row[name] is None else make(row[name]) for name, make in makers] for row in rows])
     return text.getvalue()
 
 

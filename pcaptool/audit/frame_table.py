@@ -9,8 +9,9 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
+from pcaptool.audit.arrow import arrow_array
 from pcaptool.audit.merge import Chunk
-from pcaptool.audit.piece import field_columns, is_message_field
+from pcaptool.audit.piece import field_columns, integer_type, is_message_field
 from pcaptool.coding.chain import REASONS
 from pcaptool.frames.decode import KIND
 from pcaptool.frames.table import ARRIVALS, CORRECTED, CORRUPTED, ERRORS, FRAMES, NO_COUNTER, STATES
@@ -55,7 +56,8 @@ def _field_column(profile: Profile, source: str, name: str) -> Column:
     if source == KIND:
         return Column(name, "label", "", "message kind; missing where none fits")
     field = _definition(profile, source)
-    dtype = "label" if field.names else "double" if field.scale != 1 or field.offset else "int64"
+    whole = np.dtype(integer_type(field.bits)).name
+    dtype = "label" if field.names else "double" if field.scale != 1 or field.offset else whole
     return Column(name, dtype, field.unit, f"field {source} of profile {profile.name}")
 
 
@@ -80,8 +82,11 @@ class FrameTable:
         self._errors: pq.ParquetWriter | None = None
         if folder is not None:
             labels = [c.name for c in self.columns if c.dtype == "label"]
-            self._frames = pq.ParquetWriter(folder / "frames.parquet", self.schema, compression="zstd",
-                                            compression_level=1, use_dictionary=labels, write_statistics=["time"])
+            wide = [f.name for f in self.schema if f.type in (pa.int64(), pa.int32(), TYPES["timestamp"])]
+            self._frames = pq.ParquetWriter(
+                folder / "frames.parquet", self.schema, compression="zstd", compression_level=1,
+                use_dictionary=labels, write_statistics=["time"],
+                column_encoding=dict.fromkeys(wide, "DELTA_BINARY_PACKED"))
             self._errors = pq.ParquetWriter(folder / "errors.parquet", self.errors_schema, compression="zstd",
                                             compression_level=1, use_dictionary=False, write_statistics=False)
 
@@ -92,7 +97,7 @@ class FrameTable:
             return
         if len(chunk.error_frame) and self._errors:
             self._errors.write_batch(pa.record_batch(
-                [pa.array(chunk.error_frame + self.rows), pa.array(chunk.error_position)], self.errors_schema))
+                [arrow_array(chunk.error_frame + self.rows), arrow_array(chunk.error_position)], self.errors_schema))
             self.errors += len(chunk.error_frame)
         self.rows += len(chunk)
         self._waiting.append(self._batch(profile, chunk, who, arrival, names))
@@ -132,19 +137,19 @@ class FrameTable:
         missing = unusable if any_unusable else None
         made: dict[str, pa.Array] = {
             "capture": _label(c["capture"], self.captures),
-            "packet": pa.array(c["packet"]),
-            "slot": pa.array(c["slot"]),
-            "time": pa.array(c["time"]).cast(pa.timestamp("ns", "UTC")),
+            "packet": arrow_array(c["packet"]),
+            "slot": arrow_array(c["slot"]),
+            "time": arrow_array(c["time"], None, TYPES["timestamp"]),
             "profile": _label(np.full(n, profile, np.int32), [p.name for p in self.profiles]),
             "link": _label(who, names),
-            "counter": pa.array(c["counter"], mask=_some(c["counter"] == NO_COUNTER)),
+            "counter": arrow_array(c["counter"], c["counter"] == NO_COUNTER),
             "state": _label(state, STATES),
             "arrival": _label(arrival, ARRIVALS, arrival == 0),
             "reason": _label(c["reason"], list(REASONS.values()), c["reason"] == 0),
-            "verified": pa.array(np.full(n, self.profiles[profile].chain.checks), mask=state != CORRECTED),
-            "wrong_bits": pa.array(c["wrong_bits"], mask=missing),
-            "headroom": pa.array(c["headroom"], mask=_some(np.isnan(c["headroom"]))),
-            "air_bits": pa.array(c["air_bits"]),
+            "verified": arrow_array(np.full(n, self.profiles[profile].chain.checks), state != CORRECTED),
+            "wrong_bits": arrow_array(c["wrong_bits"], missing),
+            "headroom": arrow_array(c["headroom"], np.isnan(c["headroom"])),
+            "air_bits": arrow_array(c["air_bits"]),
         }
         for source, _ in field_columns(self.profiles[profile]):
             name = output_name(source)
@@ -154,17 +159,13 @@ class FrameTable:
                 made[name] = _label(c[source], kinds, unusable | (c[source] < 0))
             else:
                 made[name] = _field_array(_definition(self.profiles[profile], source), c[source],
-                                          None if absent is None else _some(absent), self.schema.field(name).type)
+                                          absent, self.schema.field(name).type)
         arrays = [made[f.name] if f.name in made else pa.nulls(n, f.type) for f in self.schema]
         return pa.record_batch(arrays, self.schema)
 
 
-def _some(mask: NDArray[np.bool_]) -> NDArray[np.bool_] | None:
-    return mask if mask.any() else None
-
-
 def _label(codes: NDArray[np.generic], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:
-    indices = pa.array(codes.astype(np.int32), mask=None if missing is None else _some(missing))
+    indices = arrow_array(codes.astype(np.int32), missing)
     return pa.DictionaryArray.from_arrays(indices, pa.array(words, pa.string()), safe=False)
 
 
@@ -174,5 +175,5 @@ def _field_array(field: WrapperField | Field, raw: NDArray[np.generic], absent: 
         values, codes = np.unique(raw, return_inverse=True)
         return _label(codes, [field.names.get(int(v), str(v)) for v in values], absent)
     if pa.types.is_floating(kind):
-        return pa.array(raw * field.scale + field.offset, mask=absent)
-    return pa.array(raw.astype(np.int64, copy=False), mask=absent)
+        return arrow_array(raw * field.scale + field.offset, absent)
+    return arrow_array(raw.astype(kind.to_pandas_dtype(), copy=False), absent)

@@ -12,6 +12,7 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
+from pcaptool.audit.arrow import numpy_column
 from pcaptool.audit.piece import Part
 
 Columns = dict[str, NDArray[np.generic]]
@@ -72,7 +73,7 @@ class _Stream:
         if self.least == LAST:
             self._readers = []
         columns: Columns = {
-            name: values.to_numpy(zero_copy_only=False)
+            name: numpy_column(values)
             for name, values in zip(frames.schema.names, frames.columns, strict=True)
         }
         n = frames.num_rows
@@ -84,7 +85,7 @@ class _Stream:
             columns["capture"] = (columns["packet"] >> 40).astype(np.int32)
             columns["packet"] = columns["packet"] & ((1 << 40) - 1)
         columns["rank"] = np.full(n, self.source.rank, np.int32)
-        return Chunk(columns, errors.column(0).to_numpy(), errors.column(1).to_numpy())
+        return Chunk(columns, numpy_column(errors.column(0)), numpy_column(errors.column(1)))  # type: ignore[arg-type]
 
 
 def merge(sources: Sequence[Source]) -> Iterator[Chunk]:

@@ -13,6 +13,7 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
+from pcaptool.audit.arrow import arrow_array
 from pcaptool.capture import Account, Datagrams, OpenFragment, Piece, join_fragments, read_datagrams
 from pcaptool.frames.decode import KIND, FrameDecoder
 from pcaptool.frames.table import CORRUPTED, NO_KEY, FrameBatch
@@ -128,7 +129,7 @@ class _PartWriter:
         if not len(frames):
             return
         batches = (to_arrow(frames, self._decoder), pa.record_batch(
-            [pa.array(frames.error_frame), pa.array(frames.error_position)], ["frame", "position"]))
+            [arrow_array(frames.error_frame), arrow_array(frames.error_position)], ["frame", "position"]))
         if not self._writers:
             for path, batch in zip((self.part.path, self.part.errors_path), batches, strict=True):
                 self._sinks.append(pa.OSFile(str(path), "wb"))
@@ -151,7 +152,9 @@ def field_columns(profile: Profile) -> list[tuple[str, np.dtype[np.signedinteger
     """Return (column, smallest integer type) of the wrapper and message fields of a profile."""
     columns: list[tuple[str, np.dtype[np.signedinteger]]] = []
     for name, wrapped in profile.wrapper_fields.items():
-        columns.append((f"wrapper.{name}", _integer(wrapped.bytes * 8)))
+        if wrapped.must_be is not None:
+            continue            # the same in every datagram that is claimed
+        columns.append((f"wrapper.{name}", integer_type(wrapped.bytes * 8)))
     if profile.message.kind:
         columns.append((KIND, np.dtype(np.int8)))
     widths: dict[str, int] = {}
@@ -159,10 +162,10 @@ def field_columns(profile: Profile) -> list[tuple[str, np.dtype[np.signedinteger
         for f in spread:
             if not f.name.startswith("_"):
                 widths[f.name] = max(widths.get(f.name, 1), f.bits)
-    return columns + [(name, _integer(bits)) for name, bits in widths.items()]
+    return columns + [(name, integer_type(bits)) for name, bits in widths.items()]
 
 
-def _integer(bits: int) -> np.dtype[np.signedinteger]:
+def integer_type(bits: int) -> np.dtype[np.signedinteger]:
     """Return the smallest signed type that holds an unsigned value of so many bits (64: as is)."""
     return np.dtype(np.int16 if bits < 16 else np.int32 if bits < 32 else np.int64)
 
@@ -171,13 +174,13 @@ def to_arrow(frames: FrameBatch, decoder: FrameDecoder) -> pa.RecordBatch:
     """Return a batch as arrow columns: PLAIN, then fields, with ``present:NAME`` behind each message field."""
     arrays, names = [], list(PLAIN)
     for name in PLAIN:
-        arrays.append(pa.array(getattr(frames, name)))
+        arrays.append(arrow_array(getattr(frames, name)))
     for name, kind in field_columns(decoder.profile):
-        arrays.append(pa.array(frames.fields[name].astype(kind)))
+        arrays.append(arrow_array(frames.fields[name].astype(kind)))
         names.append(name)
         if is_message_field(name):
             there = frames.present.get(name)
-            arrays.append(pa.array(np.ones(len(frames), np.bool_) if there is None else there))
+            arrays.append(arrow_array(np.ones(len(frames), np.bool_) if there is None else there))
             names.append(f"present:{name}")
     return pa.record_batch(arrays, names)
 

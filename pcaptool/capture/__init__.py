@@ -3,7 +3,8 @@
 from pcaptool.capture.checksum import udp_checksum_ok
 from pcaptool.capture.datagrams import ENTRIES, Account, Damage, Datagrams, OpenFragment
 from pcaptool.capture.find import find_captures, natural
-from pcaptool.capture.read import DatagramReader, Piece, join_fragments, read_datagrams
+from pcaptool.capture.read import DatagramReader, join_fragments, read_datagrams
+from pcaptool.capture.records import Piece
 from pcaptool.capture.survey import Survey, sha256, survey
 
 __all__ = [

@@ -5,6 +5,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from pcaptool.capture.datagrams import Datagrams
+from pcaptool.capture.headers import u64
 
 
 @njit(cache=True, nogil=True)
@@ -25,15 +26,14 @@ def _sums(
         total = np.uint64(17) + np.uint64(2 * (size[i] + 8)) + np.uint64(checksum[i]) + ports[i]
         for half in range(2):
             for address in (source[i, half], destination[i, half]):
-                for k in range(4):
-                    total += address >> np.uint64(16 * k) & np.uint64(0xFFFF)
-        p, n = start[i], size[i]
-        j = 0
-        while j + 1 < n:
-            total += np.uint64(b[p + j]) << np.uint64(8) | np.uint64(b[p + j + 1])
-            j += 2
-        if j < n:
-            total += np.uint64(b[p + j]) << np.uint64(8)
+                total += (address >> np.uint64(32)) + (address & np.uint64(0xFFFFFFFF))
+        p, end = start[i], start[i] + size[i]
+        while p + 8 <= end:             # 32 bits at a time, RFC 1071, 2 (C)
+            word = u64(b, p)
+            total += (word >> np.uint64(32)) + (word & np.uint64(0xFFFFFFFF))
+            p += 8
+        for k in range(end - p):
+            total += np.uint64(b[p + k]) << np.uint64(0 if k % 2 else 8)
         while total >> np.uint64(16):
             total = (total & np.uint64(0xFFFF)) + (total >> np.uint64(16))
         out[i] = total == np.uint64(0xFFFF)

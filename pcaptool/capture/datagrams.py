@@ -91,6 +91,9 @@ class Account:
     steps: list[tuple[int, int, int]] = field(default_factory=list)  # clock went back: packet, from, to
     order_shift: int = 0             # ns added to time to give order, at the end
     open_fragments: list["OpenFragment"] = field(default_factory=list)
+    size: int = 0                    # bytes read: record_bytes + other_bytes + damaged_bytes
+    record_bytes: int = 0            # of records or packet blocks, their headers included
+    other_bytes: int = 0             # of file headers and blocks that hold no packet
 
 
 @dataclass(slots=True)
@@ -104,3 +107,4 @@ class OpenFragment:
     offset: int                          # bytes
     more: bool
     payload: bytes
+    protocol: int = 17                   # what the IP header, or the fragment header, says comes next

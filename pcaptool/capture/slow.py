@@ -1,124 +1,135 @@
-"""Packets that the array path hands back, one by one through dpkt: tunnels, 802.2, fragments."""
+"""Find the IP packet inside what the array path does not look into, one packet at a time.
 
-import struct
+dpkt reads the single headers (802.2, MPLS, PPPoE, GRE). Its packets as a whole are not relied on: it
+looks into no more than two VLAN tags, guesses what is behind MPLS, writes lengths anew, and a packet
+cut short comes out shorter without a word. Instead the place of the inner packet goes back to the
+array path, so that the same rules hold at every depth.
+"""
+
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
 
-from pcaptool.capture.headers import KNOWN_LINK_TYPES
+from pcaptool.capture.headers import (
+    ETHERNET,
+    ETHERTYPE_IPV4,
+    ETHERTYPE_IPV6,
+    GRE,
+    IP_IN_IP,
+    IPV6_IN_IP,
+    LEAST_ETHERTYPE,
+    MPLS,
+    MPLS_UPSTREAM,
+    PPPOE_SESSION,
+    PROTOCOL,
+    RAW,
+)
 
-DEEPEST = 12        # headers in headers
-
-
-@dataclass(slots=True)
-class UdpFound:
-    """A UDP datagram inside a packet."""
-
-    source: bytes
-    destination: bytes
-    ident: int              # -1 for IPv6
-    source_port: int
-    destination_port: int
-    checksum: int
-    size: int               # payload bytes sent
-    payload: bytes          # payload bytes held
-
-
-@dataclass(slots=True)
-class FragmentFound:
-    """An IP fragment inside a packet."""
-
-    source: bytes
-    destination: bytes
-    protocol: int
-    ident: int
-    offset: int
-    more: bool
-    payload: bytes
-    whole: bool             # all its bytes were captured
+BRIDGED = 0x6558                    # Ethernet in GRE, RFC 1701
+PPP_IPV4, PPP_IPV6 = 0x0021, 0x0057
+MOST_LABELS = 24
+GRE_ROUTING, GRE_VERSION = 0x4000, 0x0007
 
 
-Found = UdpFound | FragmentFound | str      # str: the ledger entry
+@dataclass(frozen=True, slots=True)
+class Inside:
+    """Where a packet inside a packet begins, where it ends on the wire, and its link type."""
+
+    link: int
+    at: int
+    stop: int
 
 
-def take_apart(data: bytes, wire: int, link: int) -> tuple[Found, str]:
-    """Return what a packet holds and, for ``unreadable``, the reason. Never raises."""
-    try:
-        return _dig(_first_layer(data, link), len(data) < wire)
-    except Exception as error:          # noqa: BLE001  dpkt raises whatever its field access raises
-        if len(data) < wire:
-            return "cut", ""
-        return "unreadable", f"malformed headers ({type(error).__name__})"
+class CutShort(Exception):
+    """The octets held end within a header."""
 
 
-def _first_layer(data: bytes, link: int) -> Any:
-    import dpkt
+def look_inside(data: bytes, kind: int, at: int, stop: int) -> Inside | None:
+    """Return the IP packet or Ethernet frame inside a special packet; None when there is none.
 
-    if link not in KNOWN_LINK_TYPES:
-        raise ValueError("link type")
-    if link == 1:
-        return dpkt.ethernet.Ethernet(data)
-    if link == 113:
-        return dpkt.ethernet.Ethernet(bytes(12) + data[14:])
-    if link == 276:
-        return dpkt.ethernet.Ethernet(bytes(12) + data[:2] + data[20:])
-    raw = data[4:] if link in (0, 108) else data
-    return dpkt.ip6.IP6(raw) if raw[0] >> 4 == 6 else dpkt.ip.IP(raw)
-
-
-def _dig(layer: Any, cut: bool) -> tuple[Found, str]:
-    import dpkt
-
-    ip: Any = None
-    for _ in range(DEEPEST):
-        if isinstance(layer, dpkt.ip.IP):
-            ip = layer
-            if layer.mf or layer.offset:
-                payload = bytes(layer.data)
-                sent = layer.len - layer.hl * 4
-                return FragmentFound(bytes(layer.src), bytes(layer.dst), layer.p, layer.id, layer.offset,
-                                     bool(layer.mf), payload[:sent], len(payload) >= sent), ""
-        elif isinstance(layer, dpkt.ip6.IP6):
-            ip = layer
-            fragment = layer.extension_hdrs.get(dpkt.ip.IP_PROTO_FRAGMENT)
-            if fragment is not None and (fragment.m_flag or fragment.frag_off):
-                payload = bytes(layer.data)
-                return FragmentFound(bytes(layer.src), bytes(layer.dst), fragment.nxt, fragment.id,
-                                     fragment.frag_off * 8, bool(fragment.m_flag), payload, not cut), ""
-        elif isinstance(layer, dpkt.udp.UDP):
-            size = layer.ulen - 8
-            if size < 0 or (not cut and size > len(layer.data)):
-                return "unreadable", "UDP length"
-            ident = ip.id if isinstance(ip, dpkt.ip.IP) else -1
-            return UdpFound(bytes(ip.src), bytes(ip.dst), ident, layer.sport, layer.dport, layer.sum, size,
-                            bytes(layer.data)[:size]), ""
-        elif isinstance(layer, bytes):
-            break
-        layer = getattr(layer, "data", b"")
-    if ip is not None:
-        return ("cut", "") if cut and not layer else ("other_ip", "")
-    return "not_ip", ""
+    data  octets held, headers included; kind, at, stop  as in Headers.special, places in data
+    Raises CutShort when ``data`` ends before that can be told.
+    """
+    seen = 0
+    while kind not in (ETHERTYPE_IPV4, ETHERTYPE_IPV6, BRIDGED):
+        if seen == MOST_LABELS:
+            return None
+        seen += 1
+        step = _step(kind)
+        if step is None:
+            return None
+        kind, at, stop = step(data, kind, at, stop)
+    return Inside(ETHERNET if kind == BRIDGED else RAW, at, stop)
 
 
-def ipv6_fragment(data: bytes, at: int, end: int) -> FragmentFound | None:
-    """Read an IPv6 fragment at its IPv6 header; None when it is malformed. RFC 8200, 4.5."""
-    kind, place = data[at + 6], at + 40
-    stop = at + 40 + struct.unpack_from(">H", data, at + 4)[0]
-    while kind in (0, 43, 60, 51):
-        following, length = data[place], data[place + 1]
-        place += (length + 2) * 4 if kind == 51 else (length + 1) * 8
-        kind = following
-    if kind != 44 or place + 8 > end:
-        return None
-    following, _, field, ident = struct.unpack_from(">BBHI", data, place)
-    return FragmentFound(data[at + 8 : at + 24], data[at + 24 : at + 40], following, ident, field >> 3 << 3,
-                         bool(field & 1), data[place + 8 : min(stop, end)], stop <= end)
+Step = Callable[[bytes, int, int, int], tuple[int, int, int]]
+NOTHING = -1                        # a kind that has no step
 
 
-def ipv4_fragment(data: bytes, at: int, end: int) -> FragmentFound:
-    """Read an IPv4 fragment at its header."""
-    header = (data[at] & 15) * 4
-    total, ident, field = struct.unpack_from(">HHH", data, at + 2)
-    stop = at + total
-    return FragmentFound(data[at + 12 : at + 16], data[at + 16 : at + 20], data[at + 9], ident,
-                         (field & 0x1FFF) * 8, bool(field & 0x2000), data[at + header : min(stop, end)],
-                         stop <= end)
+def _step(kind: int) -> Step | None:
+    if 0 <= kind < LEAST_ETHERTYPE:
+        return _llc
+    return {
+        MPLS: _mpls, MPLS_UPSTREAM: _mpls, PPPOE_SESSION: _pppoe, PROTOCOL + GRE: _gre,
+        PROTOCOL + IP_IN_IP: _ip_in_ip, PROTOCOL + IPV6_IN_IP: _ip_in_ip,
+    }.get(kind)
+
+
+def _octets(data: bytes, at: int, n: int) -> bytes:
+    if at + n > len(data):
+        raise CutShort
+    return data[at : at + n]
+
+
+def _llc(data: bytes, kind: int, at: int, stop: int) -> tuple[int, int, int]:
+    """IEEE 802.2 with a length in place of the ethertype, and SNAP (RFC 1042)."""
+    from dpkt.llc import LLC
+
+    if kind >= 8:                                   # no length holds less (cooked captures write 4)
+        stop = min(stop, at + kind)
+    first = _octets(data, at, 3)
+    if first[0] == 0x06:                            # the access point of IP
+        return ETHERTYPE_IPV4, at + 3, stop
+    header = LLC(_octets(data, at, 8))
+    return (header.type if header.oui == 0 and header.type >= LEAST_ETHERTYPE else NOTHING), at + 8, stop
+
+
+def _mpls(data: bytes, kind: int, at: int, stop: int) -> tuple[int, int, int]:
+    """A label (RFC 3032); what is behind the last one shows by the version of IP."""
+    from dpkt.ethernet import MPLSlabel
+
+    label = MPLSlabel(_octets(data, at, 4))
+    if not label.s:
+        return kind, at + 4, stop
+    version = _octets(data, at + 4, 1)[0] >> 4
+    return {4: ETHERTYPE_IPV4, 6: ETHERTYPE_IPV6}.get(version, NOTHING), at + 4, stop
+
+
+def _pppoe(data: bytes, kind: int, at: int, stop: int) -> tuple[int, int, int]:
+    """A session packet (RFC 2516) and its PPP protocol field, one octet when compressed."""
+    from dpkt.pppoe import PPPoE
+
+    header = PPPoE(_octets(data, at, 8))
+    if header.code:
+        return NOTHING, at, stop
+    stop = min(stop, at + 6 + header.len)
+    short = data[at + 6] & 1
+    protocol = data[at + 6] if short else header.ppp.p
+    inner = {PPP_IPV4: ETHERTYPE_IPV4, PPP_IPV6: ETHERTYPE_IPV6}.get(protocol, NOTHING)
+    return inner, at + (7 if short else 8), stop
+
+
+def _gre(data: bytes, kind: int, at: int, stop: int) -> tuple[int, int, int]:
+    """Generic routing encapsulation, RFC 2784 and RFC 2890."""
+    from dpkt.gre import GRE as Header
+
+    first = _octets(data, at, 4)
+    header = Header(flags=int.from_bytes(first[:2], "big"), p=int.from_bytes(first[2:], "big"))
+    if header.flags & (GRE_ROUTING | GRE_VERSION):
+        return NOTHING, at, stop
+    return (header.p if header.p >= LEAST_ETHERTYPE else NOTHING), at + len(header), stop
+
+
+def _ip_in_ip(data: bytes, kind: int, at: int, stop: int) -> tuple[int, int, int]:
+    """RFC 2003 and RFC 2473."""
+    return (ETHERTYPE_IPV4 if kind == PROTOCOL + IP_IN_IP else ETHERTYPE_IPV6), at, stop
+

@@ -1,4 +1,4 @@
-"""Look over a capture before it is decoded: its hash, its first time, and pieces to decode apart."""
+"""Look over a capture before it is decoded: format, first time, hash, and pieces to decode apart."""
 
 import hashlib
 from dataclasses import dataclass
@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 
 from pcaptool.capture.datagrams import Account
-from pcaptool.capture.read import Piece, read_records
+from pcaptool.capture.records import Piece, read_records
 from pcaptool.capture.walk import HEADER
 from pcaptool.capture.walkers import Records
 
@@ -22,6 +22,9 @@ class Survey:
     size: int                   # bytes on disk
     pieces: list[Piece]
     first_time: int | None      # ns, of the first record
+    format: str = ""            # "pcap, little endian, us", "pcapng, little endian" ...
+    compression: str = ""       # "", "gzip" ...
+    sha256: str = ""            # hex, of the file as on disk; empty unless asked for
 
 
 def sha256(path: Path) -> str:
@@ -30,27 +33,31 @@ def sha256(path: Path) -> str:
         return hashlib.file_digest(file, "sha256").hexdigest()
 
 
-def survey(path: Path, piece_bytes: int | None = PIECE_BYTES) -> Survey:
+def survey(path: Path, piece_bytes: int | None = PIECE_BYTES, hashed: bool = False) -> Survey:
     """Survey a capture; raises CaptureError when it is none.
 
     piece_bytes  a plain pcap file larger than this is cut at records about so many bytes apart, so
                  that its pieces can be decoded at once; None: never
+    hashed       also its SHA-256, in the same pass; without it, and without pieces to cut, no more
+                 than the beginning is read
     """
+    digest = hashlib.sha256() if hashed else None
     account, records = Account(), Records()
-    size = path.stat().st_size if path.exists() else 0
+    size = path.stat().st_size if path.is_file() else 0
     pieces, first_time, packets, last_cut, first_packet = [], None, 0, 0, 0
-    cuttable = piece_bytes is not None and size > piece_bytes
-    for _, base, n in read_records(Piece(path), account, records):
+    for block in read_records(Piece(path), account, records, hash=digest):
         if first_time is None:
             first_time = int(records.time[0])
-        if not cuttable or account.compression or not account.format.startswith("pcap,"):
+        cuttable = piece_bytes is not None and not account.compression and account.format.startswith("pcap,") \
+            and size > piece_bytes
+        if not cuttable and not digest:
             break
-        assert piece_bytes is not None
-        begins = base + records.start[:n] - HEADER
-        while int(begins[-1]) >= last_cut + piece_bytes:
-            i = int(np.searchsorted(begins, last_cut + piece_bytes))
+        begins = block.base + records.start[: block.count] - HEADER
+        while cuttable and int(begins[-1]) >= last_cut + (piece_bytes or 0):
+            i = int(np.searchsorted(begins, last_cut + (piece_bytes or 0)))
             pieces.append(Piece(path, last_cut, int(begins[i]), first_packet))
             last_cut, first_packet = int(begins[i]), packets + i
-        packets += n
+        packets += block.count
     pieces.append(Piece(path, last_cut, first_packet=first_packet))
-    return Survey(path, size, pieces, first_time)
+    return Survey(path, size, pieces, first_time, account.format, account.compression,
+                  digest.hexdigest() if digest else "")

@@ -69,6 +69,7 @@ class _Group:
     fault: NDArray[np.uint8]
     repaired: NDArray[np.int32]                 # bits changed by error-correcting steps
     headroom: NDArray[np.float32]
+    misled: NDArray[np.bool_]                   # a check failed behind a repair
     sides: dict[int, Bits] = field(default_factory=dict)        # step -> what encode wants back
     checks: dict[int, tuple[Bits, Bits]] = field(default_factory=dict)  # failed check -> (word, data)
 
@@ -76,7 +77,7 @@ class _Group:
         return _Group(
             self.rows[keep], self.bits[keep], None if self.doubt is None else self.doubt[keep],
             self.fault[keep], self.repaired[keep], self.headroom[keep],
-            {i: side[keep] for i, side in self.sides.items()},
+            self.misled[keep], {i: side[keep] for i, side in self.sides.items()},
             {i: (word[keep], data[keep]) for i, (word, data) in self.checks.items()},
         )
 
@@ -143,7 +144,7 @@ class Chain:
         n = len(air)
         out = _Collector(n)
         whole = _Group(np.arange(n), air, doubt, np.zeros(n, np.uint8), np.zeros(n, np.int32),
-                       np.full(n, np.nan, np.float32))
+                       np.full(n, np.nan, np.float32), np.zeros(n, np.bool_))
         for group in _split(whole, length):
             self._undo(len(self.steps) - 1, group, group.bits, group.rows, context, out)
         return out.outcome()
@@ -160,6 +161,7 @@ class Chain:
                 group.checks[i] = (word, decoded.bits)      # judged in _finish, after all correction
                 fault = np.where(fault == CHECK_FAILED, OK, fault).astype(np.uint8)
             group.fault = np.maximum(group.fault, fault)
+            group.misled = group.misled | ((fault == CHECK_FAILED) & (group.repaired > 0))
             if step.role == "code":
                 group.repaired = group.repaired + decoded.repaired
             if decoded.headroom is not None:
@@ -190,8 +192,9 @@ class Chain:
             if i in group.checks:   # holds when only covered bits differ from what was received
                 word, data = group.checks[i]
                 agreed &= count_differences(bits, word) == count_differences(inner, data)
+        misled = group.misled | (~agreed & (group.repaired > 0))
         reason[(reason == OK) & ~agreed] = CHECK_FAILED
-        reason[(reason == CHECK_FAILED) & (group.repaired > 0)] = MISCORRECTED
+        reason[(reason == CHECK_FAILED) & misled] = MISCORRECTED
         usable = reason == OK
         wrong = count_differences(bits, air)
         rows = np.flatnonzero(usable & (wrong > 0))

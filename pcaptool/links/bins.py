@@ -33,6 +33,7 @@ class Bins:
     def __init__(self) -> None:
         self.width = WIDTHS[0]
         self.start = 0
+        self.end = 0            # ns behind the latest frame counted
         self.counts = np.zeros((0, 0, len(COUNTS)), np.int64)
         self.worst = np.zeros((0, 0), np.float32)
 
@@ -54,14 +55,19 @@ class Bins:
     def _cover(self, first: int, last: int) -> None:
         bins = self.counts.shape[1]
         if bins:
-            first, last = min(first, self.start), max(last, self.start + bins * self.width - 1)
+            first, last = min(first, self.start), max(last, self.end - 1)
+            self.end = max(self.end, last + 1)
+        else:
+            self.end = last + 1
         width = self.width
         while last // width - first // width + 1 > MOST_BINS and width != WIDTHS[-1]:
             width = WIDTHS[WIDTHS.index(width) + 1]
         start = first // width * width
         wanted = (last - start) // width + 1
-        if bins and width == self.width and start == self.start and wanted == bins:
-            return
+        if bins and width == self.width and start == self.start:
+            if wanted <= bins:
+                return
+            wanted = min(2 * wanted, MOST_BINS)     # room for what follows
         counts = np.zeros((len(self.counts), wanted, len(COUNTS)), np.int64)
         worst = np.full((len(self.counts), wanted), np.inf, np.float32)
         into = (self.start + np.arange(bins) * self.width - start) // width
