@@ -30,7 +30,10 @@ _WHERE = {
     "shipped_profiles": "pcaptool.profile",
     "simulate": "pcaptool.simulate",
 }
-__all__ = ["__version__", *_WHERE]
+__all__ = [
+    "Audit", "CaptureError", "Options", "PcaptoolError", "Problem", "Profile", "ProfileError", "UsageError",
+    "__version__", "audit", "load_profile", "read_datagrams", "shipped_profiles", "simulate",
+]
 
 if TYPE_CHECKING:
     from pcaptool.audit import Options

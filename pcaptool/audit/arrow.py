@@ -4,6 +4,8 @@ pyarrow's own conversion asks whether a value is a pandas object and imports pan
 costs a short run a tenth of a second.
 """
 
+from typing import Any
+
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
@@ -11,7 +13,7 @@ from numpy.typing import NDArray
 NUMPY_NAMES = {"float": "float32", "double": "float64"}
 
 
-def arrow_array(values: NDArray[np.generic], missing: NDArray[np.bool_] | None = None,
+def arrow_array(values: NDArray[Any], missing: NDArray[np.bool_] | None = None,
                 kind: pa.DataType | None = None) -> pa.Array:
     """Return an arrow array of one-dimensional numbers or truth values.
 
@@ -28,7 +30,7 @@ def arrow_array(values: NDArray[np.generic], missing: NDArray[np.bool_] | None =
     return pa.Array.from_buffers(kind or pa.from_numpy_dtype(values.dtype), n, [valid, data], nulls)
 
 
-def numpy_column(array: pa.Array) -> NDArray[np.generic]:
+def numpy_column(array: pa.Array) -> NDArray[Any]:
     """Return an arrow array without missing values as numpy; truth values are unpacked, others shared."""
     data = array.buffers()[1]
     if pa.types.is_boolean(array.type):

@@ -3,6 +3,7 @@
 from collections.abc import Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -64,8 +65,8 @@ def _field_column(profile: Profile, source: str, name: str) -> Column:
 class FrameTable:
     """Takes merged chunks with their links and arrivals; writes row groups of a fixed size.
 
-    Without a folder it only counts. The row groups do not depend on how chunks are cut. Encoding runs in a thread of its own while
-    the next rows are made ready.
+    Without a folder it only counts. The row groups do not depend on how chunks are cut. Encoding runs
+    in a thread of its own while the next rows are made ready.
     """
 
     def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str]) -> None:
@@ -164,12 +165,12 @@ class FrameTable:
         return pa.record_batch(arrays, self.schema)
 
 
-def _label(codes: NDArray[np.generic], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:
+def _label(codes: NDArray[Any], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:
     indices = arrow_array(codes.astype(np.int32), missing)
     return pa.DictionaryArray.from_arrays(indices, pa.array(words, pa.string()), safe=False)
 
 
-def _field_array(field: WrapperField | Field, raw: NDArray[np.generic], absent: NDArray[np.bool_] | None,
+def _field_array(field: WrapperField | Field, raw: NDArray[Any], absent: NDArray[np.bool_] | None,
                  kind: pa.DataType) -> pa.Array:
     if pa.types.is_dictionary(kind):
         values, codes = np.unique(raw, return_inverse=True)

@@ -7,6 +7,7 @@ that frames can be handed on as soon as nothing earlier can come, with only the 
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -15,7 +16,7 @@ from numpy.typing import NDArray
 from pcaptool.audit.arrow import numpy_column
 from pcaptool.audit.piece import Part
 
-Columns = dict[str, NDArray[np.generic]]
+Columns = dict[str, NDArray[Any]]
 LAST = np.iinfo(np.int64).max
 
 
@@ -25,7 +26,7 @@ class Source:
 
     part: Part
     capture: int
-    rank: int
+    rank: int           # of pieces, in canonical order; -1: fragments from several pieces, to be read first
     shift: int      # ns to add to order
 
 
@@ -85,7 +86,7 @@ class _Stream:
             columns["capture"] = (columns["packet"] >> 40).astype(np.int32)
             columns["packet"] = columns["packet"] & ((1 << 40) - 1)
         columns["rank"] = np.full(n, self.source.rank, np.int32)
-        return Chunk(columns, numpy_column(errors.column(0)), numpy_column(errors.column(1)))  # type: ignore[arg-type]
+        return Chunk(columns, numpy_column(errors.column(0)), numpy_column(errors.column(1)))
 
 
 def merge(sources: Sequence[Source]) -> Iterator[Chunk]:
@@ -107,7 +108,7 @@ def _ready(pool: list[Chunk], bound: int, bound_rank: int) -> tuple[Chunk | None
     whole = pool[0] if len(pool) == 1 else _joined(pool)
     order, rank = whole.columns["order"], whole.columns["rank"]
     if len(pool) > 1 or (order[1:] < order[:-1]).any():
-        by = (whole.columns["slot"], whole.columns["packet"], rank, order)
+        by = (whole.columns["slot"], whole.columns["packet"], whole.columns["capture"], order)
         whole = whole.take(np.lexsort(by))
         order, rank = whole.columns["order"], whole.columns["rank"]
     if int(order[-1]) < bound:

@@ -107,10 +107,11 @@ def _decode_fragments(job: Job, decoders: Sequence[FrameDecoder], writers: Seque
         writer.close()
     claimed = set(datagrams.packet[taken].tolist())
     joined = entries.pop("frames")
+    complete = set(datagrams.packet.tolist())
     entries["frames"], entries["other_udp"], group = [], [], []
     for fragment in joined:
         group.append(fragment)
-        if fragment.packet in datagrams.packet:         # the last fragment of its datagram
+        if fragment.packet in complete:         # the last fragment of its datagram
             entries["frames" if fragment.packet in claimed else "other_udp"] += group
             group = []
     result.fragments = entries

@@ -123,13 +123,14 @@ class _Run:
 
     def result(self, folder: "tempfile.TemporaryDirectory[str]") -> AuditResult:
         follower = LinkFollower(self.profiles)
-        table = FrameTable(self.scratch if self.options.frames else None, self.profiles, [c.name for c in self.captures])
+        folder_of_table = self.scratch if self.options.frames else None
+        table = FrameTable(folder_of_table, self.profiles, [c.name for c in self.captures])
         sources = list(self._sources())
         hashed: list[dict[int, tuple[int, ...]]] = [{} for _ in self.profiles]
         for source in sources:
             hashed[source.part.profile] |= source.part.hashed
         outside = 0
-        for index, profile in enumerate(self.profiles):
+        for index in range(len(self.profiles)):
             known: Numbering | None = None
             if follower.makers[index].needs_message:
                 known = Numbering()
@@ -169,7 +170,7 @@ class _Run:
                     owner = self.captures[fragment.packet >> CAPTURE_SHIFT]
                     owner.entries[entry] += 1
             for part in piece.parts:
-                yield Source(part, -1, rank, 0)
+                yield Source(part, -1, -1, 0)
 
     def _follow(self, profile: int, chunk: Chunk, follower: LinkFollower, known: Numbering | None,
                 table: FrameTable, hashed: list[dict[int, tuple[int, ...]]]) -> int:
@@ -244,6 +245,6 @@ class _Run:
 
 
 def _slice(profile: int, chunk: Chunk) -> FrameSlice:
-    return FrameSlice(profile, **{name: chunk.columns[name] for name in SLICE})  # type: ignore[arg-type]
+    return FrameSlice(profile, **{name: chunk.columns[name] for name in SLICE})
 
 

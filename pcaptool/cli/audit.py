@@ -54,7 +54,8 @@ def audit(ctx: click.Context, captures: tuple[str, ...], profiles: tuple[str, ..
                               frames=frames != "none" and out is not None, jobs=jobs or os.cpu_count() or 1,
                               progress=show)
             near = out.absolute().parent if out else None
-            result = run(captures, list(profiles) or None, options=options, near=near if near and near.is_dir() else None)
+            near = near if near and near.is_dir() else None
+            result = run(captures, list(profiles) or None, options=options, near=near)
         page = result.write(out, frames=frames) if out else None
         result.close()
     print_audit(result, as_json, page, named=not profiles)

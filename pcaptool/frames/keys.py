@@ -84,8 +84,7 @@ def _part(profile: Profile, reference: str) -> KeyPart:
     if reference.startswith("carrier."):
         return KeyPart(reference, 64, {})
     field = profile.find_field(reference)
-    bits = field.bits if "." not in reference else field.bytes * 8
-    return KeyPart(reference, bits, dict(field.names))
+    return KeyPart(reference, field.bits, dict(field.names))
 
 
 def _address(value: int) -> str:

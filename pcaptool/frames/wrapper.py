@@ -195,7 +195,7 @@ def _in_order(parts: Sequence[AirFrames], names: Sequence[str]) -> AirFrames:
         return AirFrames(empty, empty, empty, empty, empty, dict.fromkeys(names, empty))
     row = np.concatenate([p.row for p in parts])
     order = np.argsort(row, kind="stable")
-    joined = AirFrames(row, *(np.concatenate([getattr(p, a) for p in parts])
-                              for a in ("slot", "start", "held", "sent")),
-                       {name: np.concatenate([p.fields[name] for p in parts]) for name in parts[0].fields})
+    fields = {name: np.concatenate([p.fields[name] for p in parts]) for name in parts[0].fields}
+    joined = AirFrames(row, np.concatenate([p.slot for p in parts]), np.concatenate([p.start for p in parts]),
+                       np.concatenate([p.held for p in parts]), np.concatenate([p.sent for p in parts]), fields)
     return joined.take(order)

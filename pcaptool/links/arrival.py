@@ -19,6 +19,10 @@ MAX_DROPOUT = 3000
 SAMPLES = 65                # intervals of which the median is taken
 LEAST_SAMPLES = 5
 
+# Shares of the interval: how far from its phase a frame may come, from when on it is another link's, how
+# much nearer the best link must be, and up to what mean deviation a link is regular enough to tell.
+IN_PHASE, OUT_OF_PHASE, DISTINCT, REGULAR = 0.15, 0.3, 0.03, 0.1
+
 # One link's state; all times in ns.
 LINK_STATE = np.dtype([
     ("extended", np.int64),     # highest extended counter of this run, -1 before the first frame
@@ -34,6 +38,7 @@ LINK_STATE = np.dtype([
     ("repeated", np.int64), ("late", np.int64), ("restarts", np.int64),
     ("bits_corrected", np.int64), ("bits_usable", np.int64),
     ("first_time", np.int64), ("last_time", np.int64), ("longest", np.int64),
+    ("off_sum", np.float64), ("off_count", np.int64),   # deviation from the phase, share of the interval
     ("corrupted_runs", np.int64), ("in_run", np.int64),
     ("headroom_sum", np.float64), ("headroom_count", np.int64), ("headroom_worst", np.float64),
 ])
@@ -65,11 +70,14 @@ def _median(values: NDArray[np.int64], n: int) -> int:
 
 
 @njit(cache=True, nogil=True)
-def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int, window: int) -> tuple[int, int, int]:
+def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int, window: int,
+           regular: bool) -> tuple[int, int, int]:
     """Return (advance, verdict, resolved) of a counter value against the highest one so far.
 
     advance   frames past ``extended``; 0 or less: behind it
     verdict   IN_TURN, LATE (perhaps repeated) or RESTART
+    regular   the link keeps its interval, so that a jump back over the counter's end which time does
+              not explain is a restart, however short it is
     """
     delta = (counter - extended) % modulo           # 0 .. modulo - 1
     back = (modulo - delta) % modulo                # how far behind, if behind
@@ -81,7 +89,8 @@ def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int
             return 0, LATE, BY_COUNTER
         if back <= window and (advance - expected) > (expected + back):
             return -back, LATE, BY_COUNTER
-        if advance > 2 * expected + window and advance > 1:
+        jumps_back = counter < extended % modulo
+        if advance > 2 * expected + (2 if regular and jumps_back else window):
             return advance, RESTART, BY_TIME
         if turns == 0 and 2 * expected < modulo:
             return advance, IN_TURN, BY_COUNTER
@@ -93,9 +102,6 @@ def extend(counter: int, extended: int, modulo: int, elapsed: int, interval: int
     return delta, IN_TURN, BY_COUNTER
 
 
-IN_PHASE, OUT_OF_PHASE, DISTINCT = 0.15, 0.3, 0.05    # of the interval
-
-
 @njit(cache=True, nogil=True)
 def whose(
     claimed: int, group: int, order: int, links: NDArray[np.void], link_group: NDArray[np.int64]
@@ -104,12 +110,17 @@ def whose(
 
     claimed  the link that its damaged key names, or the group's home for frames of no known link
     The damaged key is believed unless the frame comes out of phase with that link and in phase with
-    exactly one other of the group: a whole number of intervals after its latest usable frame.
+    one other of the group, clearly nearer than any third: a whole number of intervals after its latest
+    usable frame. Links that send irregularly cannot be told in that way.
     """
     best, best_off, second_off = -1, 1.0, 1.0
     claimed_off = 1.0
     for i in range(len(link_group)):
         if link_group[i] != group or links[i].interval <= 0 or links[i].extended < 0:
+            continue
+        mean_off = links[i].off_sum / max(links[i].off_count, 1)
+        if i != claimed and mean_off > REGULAR:
+            second_off = 0.0
             continue
         passed = (order - links[i].time) / links[i].interval
         off = abs(passed - max(np.round(passed), 1.0))
@@ -121,7 +132,7 @@ def whose(
             second_off = off
     if claimed_off <= OUT_OF_PHASE or best < 0:
         return claimed
-    return best if best_off <= IN_PHASE and second_off > 2 * best_off + DISTINCT else claimed
+    return best if best_off <= IN_PHASE and second_off - best_off > DISTINCT else claimed
 
 
 @njit(cache=True, nogil=True)
@@ -196,7 +207,8 @@ def follow(
             continue
         elapsed = max(order[i] - at.time, 0)
         advance, verdict, resolved = extend(
-            counter[i], at.extended, modulo[who], elapsed, at.interval, window[who])
+            counter[i], at.extended, modulo[who], elapsed, at.interval, window[who],
+            at.off_count >= LEAST_SAMPLES and at.off_sum <= REGULAR * at.off_count)
         if verdict == LATE and counter[i] == at.behind and elapsed > at.interval > 0:
             verdict = RESTART           # two in a row behind: the count began again within the window
         at.behind = -1
@@ -229,6 +241,9 @@ def follow(
             seen[who, at.extended % slots] = True
             continue
         arrival[i] = IN_TURN
+        if at.interval > 0:
+            at.off_sum += min(abs(elapsed / at.interval - advance), 0.5)
+            at.off_count += 1
         if advance == 1 and at.samples < SAMPLES and elapsed > 0:
             samples[who, at.samples] = elapsed
             at.samples += 1

@@ -56,10 +56,10 @@ def gap_rows(follower: LinkFollower, names: Sequence[str], dropped: Sequence[tup
     split = split_losses(gateway, gaps["from_order"], gaps["to_order"], lost, events["link"], events["from_order"],
                          events["to_order"], events["missing"], in_drops)
     begin, end = gaps["from_order"] - gaps["shift"], gaps["to_order"] - gaps["shift"]
-    order = sorted(range(len(gaps)), key=lambda i: (natural(names[gaps["link"][i]]), gaps["from_order"][i]))
+    order = sorted(range(len(gaps)), key=lambda i: (natural(names[int(gaps["link"][i])]), int(gaps["from_order"][i])))
     modulo = links.modulo[gaps["link"]] if len(gaps) else np.zeros(0, np.int64)
     rows: list[Row] = [{
-        "link": names[gaps["link"][i]],
+        "link": names[int(gaps["link"][i])],
         "counter_before": int(gaps["before"][i] % modulo[i]), "counter_after": int(gaps["after"][i] % modulo[i]),
         "missing": int(gaps["missing"][i]), "corrupted": int(corrupted[i]), "lost": int(lost[i]),
         "lost_air": int(split.air[i]), "lost_backhaul": int(split.backhaul[i]),
@@ -79,7 +79,7 @@ def link_rows(follower: LinkFollower, names: Sequence[str], gaps: Gaps) -> list[
     lost, air = per_link(gaps.lost), per_link(gaps.split.air)
     backhaul, undecided = per_link(gaps.split.backhaul), per_link(gaps.split.undecided)
     count, lossy = per_link(np.ones_like(gaps.link)), per_link((gaps.lost > 0).astype(np.int64))
-    rows = []
+    rows: list[Row] = []
     for i in sorted(range(n), key=lambda i: natural(names[i])):
         s = follower.links.states[i]
         if not s["heard"]:
@@ -133,7 +133,7 @@ def interval_rows(follower: LinkFollower, names: Sequence[str], gaps: Gaps) -> l
         else:
             place, link, weight = (gaps.end - bins.start) // width, gaps.link, gaps.lost
         np.add.at(lost, (link, np.clip(place, 0, many - 1)), weight)
-    rows = []
+    rows: list[Row] = []
     for i in sorted(range(min(n, len(bins.counts))), key=lambda i: natural(names[i])):
         for b in np.flatnonzero(bins.counts[i].any(axis=1) | (lost[i] > 0)):
             intact, corrected, corrupted, short = (int(v) for v in bins.counts[i, b])

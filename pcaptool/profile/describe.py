@@ -59,7 +59,7 @@ def _layout(title: str, group: Sequence[Field | WrapperField], unit: str) -> lis
 
 
 def _rate(profile: Profile) -> list[str]:
-    kinds = [k.name for k in profile.message.kind] or [None]
+    kinds: list[str | None] = [k.name for k in profile.message.kind] or [None]
     sizes = {message_bits(profile, kind) for kind in kinds}
     out = []
     for k in sorted(sizes):

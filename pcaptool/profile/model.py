@@ -3,7 +3,8 @@
 from functools import cached_property
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field as Key, WithJsonSchema
+from pydantic import BaseModel, BeforeValidator, ConfigDict, WithJsonSchema
+from pydantic import Field as Key
 
 from pcaptool.coding import Chain, Step
 

@@ -4,9 +4,9 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 
 from pcaptool.audit.table import MEANINGS
-from pcaptool.table import time_text, write_whole
 from pcaptool.report.terminal import verdict_text
 from pcaptool.report.timeline import STATES, timeline
+from pcaptool.table import time_text, write_whole
 
 Row = Mapping[str, object]
 MOST_PICTURES = 400     # links with a picture; the table has them all

@@ -32,10 +32,15 @@ def plan_problems(profile: Profile, plan: Plan, origin: str) -> list[Problem]:
         problems.append(made("per_datagram", str(plan.per_datagram),
                              f"{profile.wrapper.frames}, as {profile.name} says in wrapper.frames",
                              f"set per_datagram = {profile.wrapper.frames}"))
-    number = sum(min(plan.duration / k.interval, math.inf if k.frames is None else k.frames) for k in plan.link)
+    number = sum(min(plan.duration / k.interval, math.inf if k.frames is None else k.frames)
+                 for k in plan.link)
     if number > MOST_FRAMES:
         problems.append(made("duration", f"{number:.3g} frames in all", f"at most {MOST_FRAMES:,}",
                              "simulate a shorter time, fewer links or longer intervals"))
+    end = plan.start_ns / 1e9 + plan.duration + max(k.interval * (k.late_places + 2) for k in plan.link)
+    if end >= 2**32:
+        problems.append(made("duration", "an end after 2106-02-07",
+                             "an earlier one: captures hold 32-bit seconds", "set start or duration lower"))
     problems += [made(f"backhaul[{i}].gateway", f"gateway {b.gateway} a second time", "one entry for each",
                       "put the two together") for i, b in enumerate(plan.backhaul)
                  if b.gateway in [other.gateway for other in plan.backhaul[:i]]]
@@ -91,8 +96,8 @@ def _link(profile: Profile, link: LinkPlan) -> Found:
             yield (f"kinds[{i}]", repr(kind),
                    "one of " + ", ".join(names) if names else "none: the profile has no kinds",
                    f"write {near[0]}" if near else "name a kind of the profile")
-            return
-    yield from _lengths(profile, link, names)
+    if set(link.kinds) <= set(names):
+        yield from _lengths(profile, link, names)
     modulo = profile.counter.modulo if profile.counter else 0
     counters = [("first_counter", link.first_counter),
                 *((f"restart[{i}].to", r.to) for i, r in enumerate(link.restart))]

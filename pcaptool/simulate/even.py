@@ -1,6 +1,7 @@
 """A plan from a few figures: some links that differ in nothing but their keys."""
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 from pcaptool.problem import Problem, UsageError
@@ -23,12 +24,18 @@ def even_plan(profile: Profile, *, links: int, frames: int, interval: float, lin
     """
     most = _most(profile)
     if links > most:
-        raise UsageError(Problem(file="options", place="links", found=str(links),
-                                 expected=f"at most {most}, what {' and '.join(profile.link.by)} can tell apart",
-                                 fix=f"give {most} or fewer"))
+        raise UsageError(Problem(
+            file="options", place="links", found=str(links), fix=f"give {most} or fewer",
+            expected=f"at most {most}, what {' and '.join(profile.link.by)} can tell apart"))
     each = [{"key": key, "gateway": gateway, "interval": interval, "first": interval * i / links,
              "frames": frames, **link} for i in range(links) for key, gateway in [_key(profile, i)]]
-    return make_plan({"duration": interval * (frames + 1), **rest, "link": each}, "options")
+    whole = {"duration": interval * (frames + 1), **rest}
+    try:
+        make_plan({**whole, "link": each[:1]}, "options")       # one link, so that a problem is told once
+    except UsageError as error:
+        told = (replace(p, place=p.place.removeprefix("link[0].")) for p in error.problems)
+        raise UsageError(*told) from None
+    return make_plan({**whole, "link": each}, "options")
 
 
 def _own(profile: Profile) -> list[str]:

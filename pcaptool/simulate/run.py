@@ -3,7 +3,7 @@
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from pcaptool.problem import Problem, UsageError
 from pcaptool.profile import Profile, load_profile
@@ -55,9 +55,9 @@ class Simulation:
         """The truth as a DataFrame with the columns of ``columns``."""
         import pandas as pd
 
-        kinds = {"int64": "Int64", "float64": "Float64", "bool": "bool", "label": "string",
+        kinds: dict[str, Any] = {"int64": "Int64", "float64": "Float64", "bool": "bool", "label": "string",
                  "string": "string", "timestamp": "Int64"}
-        table = self._table()
+        table: dict[str, Any] = dict(self._table())
         frame = pd.DataFrame({c.name: pd.array(table[c.name], dtype=kinds[c.dtype]) for c in self.columns})
         times = [c.name for c in self.columns if c.dtype == "timestamp"]
         return frame.assign(**{name: pd.to_datetime(frame[name], unit="ns", utc=True) for name in times})

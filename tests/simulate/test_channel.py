@@ -90,8 +90,8 @@ def test_the_state_runs_on_from_frame_to_frame_unless_fresh() -> None:
         assert near(int((hit[1:] & hit[:-1]).sum()), len(bits) - 1, both, 9.0 if not fresh else 1.3)
 
 
-@given(st.lists(st.integers(0, 50), min_size=1, max_size=30), st.floats(0, 1), st.floats(0, 1), st.floats(0, 1),
-       st.floats(0, 1), st.booleans(), st.integers(0, 2**32))
+@given(st.lists(st.integers(0, 50), min_size=1, max_size=30), st.floats(0, 1), st.floats(0, 1),
+       st.floats(0, 1), st.floats(0, 1), st.booleans(), st.integers(0, 2**32))
 def test_positions_ascend_and_lie_in_the_stream(lengths: list[int], p: float, r: float, h: float, k: float,
                                                 fresh: bool, seed: int) -> None:
     bits = np.array(lengths)
@@ -100,6 +100,11 @@ def test_positions_ascend_and_lie_in_the_stream(lengths: list[int], p: float, r:
     assert not len(found) or (found[0] >= 0 and found[-1] < bits.sum())
     first, end = channel.bad_runs(rng(seed), int(bits.sum()), p, r)
     assert (first < end).all() and (first[1:] >= end[:-1]).all()
+
+
+def test_the_first_state_is_bad_as_often_as_the_state_is_bad_at_all() -> None:
+    one, n = rng(), 40_000
+    assert near(sum(len(channel.bad_runs(one, 1, 0.01, 0.03)[0]) for _ in range(n)), n, 0.25)
 
 
 def test_a_state_that_is_never_left_is_the_only_one() -> None:

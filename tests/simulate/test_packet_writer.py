@@ -61,7 +61,8 @@ def test_a_sum_of_nought_is_sent_as_all_ones() -> None:
     n = 1 << 16
     everything = np.arange(n).astype(">u2").tobytes()
     one = np.full(n, 0x0A3D000B)
-    packets = udp_packets(pieces([everything[2 * i : 2 * i + 2] for i in range(n)]), one, one, one * 0 + 47310, one)
+    payloads = pieces([everything[2 * i : 2 * i + 2] for i in range(n)])
+    packets = udp_packets(payloads, one, one, np.full(n, 47310), one)
     sums = packets.buffer.reshape(n, -1)[:, 40:42].astype(np.int64) @ [256, 1]
     assert (sums != 0).all() and 1 <= (sums == 0xFFFF).sum() <= 2
 
