@@ -10,7 +10,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
-from pcaptool.audit.arrow import arrow_array
+from pcaptool.audit.arrow import arrow_array, numpy_column
 from pcaptool.audit.merge import Chunk
 from pcaptool.audit.piece import field_columns, integer_type, is_message_field
 from pcaptool.coding.chain import REASONS
@@ -62,72 +62,82 @@ def _field_column(profile: Profile, source: str, name: str) -> Column:
     return Column(name, dtype, field.unit, f"field {source} of profile {profile.name}")
 
 
-class FrameTable:
-    """Takes merged chunks with their links and arrivals; writes row groups of a fixed size.
+class _RowGroups:
+    """A Parquet file whose row groups have a fixed size, however the rows arrive.
 
-    Without a folder it only counts. The row groups do not depend on how chunks are cut. Encoding runs
-    in a thread of its own while the next rows are made ready.
+    Encoding runs in a thread of its own while the next rows are made ready.
     """
+
+    def __init__(self, path: Path, schema: pa.Schema, size: int, thread: ThreadPoolExecutor, **options: Any) -> None:
+        self._writer = pq.ParquetWriter(path, schema, compression="zstd", compression_level=1, **options)
+        self._schema, self._size, self._thread = schema, size, thread
+        self._waiting: list[pa.RecordBatch] = []
+        self._rows = 0
+        self._writing: Future[None] | None = None
+
+    def add(self, batch: pa.RecordBatch) -> None:
+        self._waiting.append(batch)
+        self._rows += len(batch)
+        if self._rows >= self._size:
+            self._flush(self._rows // self._size * self._size)
+
+    def close(self) -> None:
+        self._flush(self._rows)
+        if self._writing is not None:
+            self._writing.result()
+        self._writer.close()
+
+    def _flush(self, rows: int) -> None:
+        table = pa.Table.from_batches(self._waiting, self._schema)
+        if self._writing is not None:
+            self._writing.result()
+        if rows:
+            self._writing = self._thread.submit(self._write, table.slice(0, rows))
+        self._waiting = table.slice(rows).to_batches()
+        self._rows -= rows
+
+    def _write(self, table: pa.Table) -> None:
+        for at in range(0, len(table), self._size):
+            self._writer.write_table(_canonical(table.slice(at, self._size)), self._size)
+
+
+class FrameTable:
+    """Takes merged chunks with their links and arrivals; without a folder it only counts them."""
 
     def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str]) -> None:
         self.columns = columns_of(profiles)
         self.schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in self.columns])
         self.errors_schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in ERRORS])
         self.profiles, self.captures = profiles, list(captures)
-        self.rows = self.errors = 0
-        self._waiting: list[pa.RecordBatch] = []
-        self._waiting_rows = 0
+        self.rows = 0
         self._thread = ThreadPoolExecutor(1)
-        self._writing: Future[None] | None = None
-        self._frames: pq.ParquetWriter | None = None
-        self._errors: pq.ParquetWriter | None = None
+        self._frames: _RowGroups | None = None
+        self._errors: _RowGroups | None = None
         if folder is not None:
             labels = [c.name for c in self.columns if c.dtype == "label"]
             wide = [f.name for f in self.schema if f.type in (pa.int64(), pa.int32(), TYPES["timestamp"])]
-            self._frames = pq.ParquetWriter(
-                folder / "frames.parquet", self.schema, compression="zstd", compression_level=1,
-                use_dictionary=labels, write_statistics=["time"],
-                column_encoding=dict.fromkeys(wide, "DELTA_BINARY_PACKED"))
-            self._errors = pq.ParquetWriter(folder / "errors.parquet", self.errors_schema, compression="zstd",
-                                            compression_level=1, use_dictionary=False, write_statistics=False)
+            self._frames = _RowGroups(
+                folder / "frames.parquet", self.schema, ROW_GROUP, self._thread, use_dictionary=labels,
+                write_statistics=["time"], column_encoding=dict.fromkeys(wide, "DELTA_BINARY_PACKED"))
+            self._errors = _RowGroups(folder / "errors.parquet", self.errors_schema, 4 * ROW_GROUP, self._thread,
+                                      use_dictionary=False, write_statistics=False)
 
     def add(self, profile: int, chunk: Chunk, who: NDArray[np.int64], arrival: NDArray[np.uint8],
             names: Sequence[str]) -> None:
-        if not len(chunk) or self._frames is None:
-            self.rows += len(chunk)
-            return
-        if len(chunk.error_frame) and self._errors:
-            self._errors.write_batch(pa.record_batch(
-                [arrow_array(chunk.error_frame + self.rows), arrow_array(chunk.error_position)], self.errors_schema))
-            self.errors += len(chunk.error_frame)
+        """Append a chunk; ``who`` numbers ``names``."""
+        if len(chunk) and self._frames and self._errors:
+            if len(chunk.error_frame):
+                self._errors.add(pa.record_batch(
+                    [arrow_array(chunk.error_frame + self.rows), arrow_array(chunk.error_position)],
+                    self.errors_schema))
+            self._frames.add(self._batch(profile, chunk, who, arrival, names))
         self.rows += len(chunk)
-        self._waiting.append(self._batch(profile, chunk, who, arrival, names))
-        self._waiting_rows += len(chunk)
-        if self._waiting_rows >= ROW_GROUP:
-            self._flush(last=False)
 
     def close(self) -> None:
-        self._flush(last=True)
-        if self._writing is not None:
-            self._writing.result()
-        self._thread.shutdown()
         for writer in (self._frames, self._errors):
             if writer is not None:
                 writer.close()
-
-    def _flush(self, *, last: bool) -> None:
-        table = pa.Table.from_batches(self._waiting, self.schema)
-        full = len(table) if last else len(table) // ROW_GROUP * ROW_GROUP
-        if self._writing is not None:
-            self._writing.result()
-        if full:
-            self._writing = self._thread.submit(self._write, table.slice(0, full))
-        self._waiting = table.slice(full).to_batches()
-        self._waiting_rows = len(table) - full
-
-    def _write(self, table: pa.Table) -> None:
-        if self._frames is not None:
-            self._frames.write_table(table, ROW_GROUP)
+        self._thread.shutdown()
 
     def _batch(self, profile: int, chunk: Chunk, who: NDArray[np.int64], arrival: NDArray[np.uint8],
                names: Sequence[str]) -> pa.RecordBatch:
@@ -163,6 +173,31 @@ class FrameTable:
                                           absent, self.schema.field(name).type)
         arrays = [made[f.name] if f.name in made else pa.nulls(n, f.type) for f in self.schema]
         return pa.record_batch(arrays, self.schema)
+
+
+def _canonical(table: pa.Table) -> pa.Table:
+    """Return a row group in one piece, the words of each label sorted: bytes that only the rows decide."""
+    columns = []
+    for name in table.column_names:
+        column = table.column(name)
+        if pa.types.is_dictionary(column.type):
+            whole = column.unify_dictionaries().combine_chunks()
+            columns.append(_sorted_label(whole if isinstance(whole, pa.DictionaryArray) else whole.chunk(0)))
+        else:
+            columns.append(column.combine_chunks())
+    return pa.table(columns, table.schema)
+
+
+def _sorted_label(label: pa.DictionaryArray) -> pa.DictionaryArray:
+    words = label.dictionary.to_pylist()
+    codes = numpy_column(label.indices.fill_null(0))
+    used = np.flatnonzero(np.bincount(codes, minlength=len(words))) if len(codes) else np.zeros(0, np.int64)
+    order = sorted(used.tolist(), key=lambda i: words[i])
+    place = np.zeros(max(len(words), 1), np.int32)
+    place[order] = np.arange(len(order))
+    missing = ~numpy_column(label.is_valid()) if label.null_count else None
+    return pa.DictionaryArray.from_arrays(arrow_array(place[codes], missing),
+                                          pa.array([words[i] for i in order], pa.string()), safe=False)
 
 
 def _label(codes: NDArray[Any], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:

@@ -17,6 +17,7 @@ from pcaptool.audit.merge import Chunk, Source, merge
 from pcaptool.audit.naming import short_names
 from pcaptool.audit.piece import Job, PieceResult, decode_piece
 from pcaptool.capture import sha256, survey
+from pcaptool.capture.survey import PIECE_BYTES
 from pcaptool.links.follow import FrameSlice, LinkFollower
 from pcaptool.links.numbering import Numbering
 from pcaptool.links.rows import gap_rows, interval_rows, link_rows
@@ -104,7 +105,7 @@ class _Run:
         self.hashing = ThreadPoolExecutor(1)
         for path in paths:
             try:
-                found = survey(path) if many else survey(path, None)
+                found = survey(path, PIECE_BYTES if many else None)
             except CaptureError as error:
                 self.problems += error.problems
                 continue

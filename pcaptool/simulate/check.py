@@ -13,7 +13,7 @@ from pcaptool.simulate.messages import bounds, raw_value
 from pcaptool.simulate.plan import Generator, LinkPlan, Plan
 from pcaptool.simulate.transmit import gateway_field, gateway_of, link_name
 
-MOST_FRAMES = 20_000_000            # all of them are held in memory
+MOST_FRAMES = 5_000_000             # all of them are held in memory, about 1.5 kB each
 
 
 def plan_problems(profile: Profile, plan: Plan, origin: str) -> list[Problem]:

@@ -2,6 +2,7 @@
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field
+from itertools import islice
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -19,6 +20,7 @@ from pcaptool.table import Column, csv_text
 if TYPE_CHECKING:
     import pandas as pd
 
+ROWS_AT_ONCE = 1 << 14
 OTHERS = (".bz2", ".xz", ".zst", ".zip", ".pcapng", ".csv")
 
 
@@ -38,17 +40,22 @@ class Simulation:
 
     def rows(self) -> Iterator[dict[str, object]]:
         """Yield the truth row by row, in order of sending; None is missing, times are ns since 1970."""
-        table = self._table()
-        for row in zip(*table.values(), strict=True):
-            yield dict(zip(table, row, strict=True))
+        for first in range(0, len(self.sent), ROWS_AT_ONCE):
+            table = self._table(slice(first, first + ROWS_AT_ONCE))
+            for row in zip(*table.values(), strict=True):
+                yield dict(zip(table, row, strict=True))
 
-    def _table(self) -> dict[str, list[object]]:
+    def _table(self, some: slice) -> dict[str, list[object]]:
         links = [link_name(self.profile, link) for link in self.plan.link]
-        return truth_table(self.profile, self.sent, links)
+        return truth_table(self.profile, self.sent, links, some)
 
     def truth(self) -> str:
         """Return the truth as CSV."""
-        return csv_text(self.columns, self.rows())
+        rows, columns = self.rows(), self.columns
+        text = [csv_text(columns, ())]
+        while part := list(islice(rows, ROWS_AT_ONCE)):     # so that few cells are held at once
+            text.append(csv_text(columns, part).partition("\n")[2])
+        return "".join(text)
 
     @property
     def frames(self) -> "pd.DataFrame":
@@ -57,7 +64,7 @@ class Simulation:
 
         kinds: dict[str, Any] = {"int64": "Int64", "float64": "Float64", "bool": "bool", "label": "string",
                  "string": "string", "timestamp": "Int64"}
-        table: dict[str, Any] = dict(self._table())
+        table: dict[str, Any] = dict(self._table(slice(0, len(self.sent))))
         frame = pd.DataFrame({c.name: pd.array(table[c.name], dtype=kinds[c.dtype]) for c in self.columns})
         times = [c.name for c in self.columns if c.dtype == "timestamp"]
         return frame.assign(**{name: pd.to_datetime(frame[name], unit="ns", utc=True) for name in times})

@@ -51,35 +51,37 @@ def _column(name: str, field: Field) -> Column:
     return Column(field_column(name), dtype, field.unit, meaning)
 
 
-def truth_table(profile: Profile, sent: Sent, links: list[str]) -> dict[str, list[object]]:
-    """Return the truth by column, rows in order of sending; links are the names of the plan's links.
+def truth_table(profile: Profile, sent: Sent, links: list[str], some: slice) -> dict[str, list[object]]:
+    """Return the truth of some transmissions by column, in order of sending.
 
+    links  names of the plan's links
     None is missing; times are ns since 1970.
     """
-    heard = sent.fate == CAPTURED
-    cut = sent.held < sent.air_bytes
-    wrong = np.bincount(sent.error_frame, minlength=len(sent))
+    heard, held = sent.fate[some] == CAPTURED, sent.held[some]
+    first, last = np.searchsorted(sent.error_frame, [some.start, min(some.stop, len(sent))])
+    wrong = np.bincount(sent.error_frame[first:last] - some.start, minlength=len(heard))
     behind = wrong.cumsum().tolist()
-    position = sent.error_position.tolist()
-    state = np.where(cut, 2, np.where(wrong > 0, 1, 0))
+    position = sent.error_position[first:last].tolist()
+    state = np.where(held < sent.air_bytes[some], 2, np.where(wrong > 0, 1, 0))
+    counter, kind = sent.counter[some], sent.kind[some]
     columns: dict[str, list[object]] = {
-        "link": [links[i] for i in sent.link.tolist()], "gateway": sent.gateway.tolist(),
-        "sequence": sent.sequence.tolist(), "counter": _some(sent.counter, sent.counter >= 0),
-        "sent": sent.sent.tolist(), "captured": _some(sent.arrives, heard),
-        "fate": [FATES[i] for i in sent.fate.tolist()], "capture": _some(sent.capture, heard),
-        "packet": _some(sent.packet, heard), "slot": _some(sent.slot, heard),
-        "repeated": sent.repeated.tolist(), "late": sent.late.tolist(), "restart": sent.restart.tolist(),
-        "cut": sent.cut.tolist(),
-        "expected": _some(state, heard, ("intact", "damaged", "cut")), "air_bits": sent.air_bits.tolist(),
-        "held_bytes": _some(sent.held, heard), "wrong_bits": wrong.tolist(),
+        "link": [links[i] for i in sent.link[some].tolist()], "gateway": sent.gateway[some].tolist(),
+        "sequence": sent.sequence[some].tolist(), "counter": _some(counter, counter >= 0),
+        "sent": sent.sent[some].tolist(), "captured": _some(sent.arrives[some], heard),
+        "fate": [FATES[i] for i in sent.fate[some].tolist()], "capture": _some(sent.capture[some], heard),
+        "packet": _some(sent.packet[some], heard), "slot": _some(sent.slot[some], heard),
+        "repeated": sent.repeated[some].tolist(), "late": sent.late[some].tolist(),
+        "restart": sent.restart[some].tolist(), "cut": sent.cut[some].tolist(),
+        "expected": _some(state, heard, ("intact", "damaged", "cut")),
+        "air_bits": sent.air_bits[some].tolist(), "held_bytes": _some(held, heard),
+        "wrong_bits": wrong.tolist(),
         "positions": [";".join(map(str, position[b - w : b])) if w else ""
                       for b, w in zip(behind, wrong.tolist(), strict=True)],
     }
     if profile.message.kind:
-        names = [k.name for k in profile.message.kind]
-        columns[KIND] = _some(sent.kind, sent.kind >= 0, names)
+        columns[KIND] = _some(kind, kind >= 0, [k.name for k in profile.message.kind])
     for name, field in profile.message_fields.items():
-        columns[field_column(name)] = _field(sent, name, field)
+        columns[field_column(name)] = _field(sent, name, field, some)
     return columns
 
 
@@ -89,10 +91,10 @@ def _some(values: NDArray[np.int64], there: NDArray[np.bool_], words: Sequence[s
             for v, t in zip(values.tolist(), there.tolist(), strict=True)]
 
 
-def _field(sent: Sent, name: str, field: Field) -> list[object]:
+def _field(sent: Sent, name: str, field: Field, some: slice) -> list[object]:
     if name not in sent.values:
-        return [None] * len(sent)
-    raw, there = sent.values[name], sent.present[name]
+        return [None] * len(sent.link[some])
+    raw, there = sent.values[name][some], sent.present[name][some]
     if field.names:
         return [field.names.get(v, str(v)) if t else None
                 for v, t in zip(raw.tolist(), there.tolist(), strict=True)]

@@ -13,7 +13,7 @@ from simulated import captured, flipped, merrowdale, positions, rows
 
 from pcaptool.problem import UsageError
 from pcaptool.profile import Profile, encode_fields, load_profile, parse_profile
-from pcaptool.simulate import TRUTH, Plan, Simulation, make_plan, simulate, truth_columns
+from pcaptool.simulate import TRUTH, Plan, Simulation, make_plan, run, simulate, truth_columns
 
 ROUGH = {"interval": 2, "kinds": ["level"], "bit_error_rate": 0.002, "loss": 0.05, "repeat": 0.03,
          "late": 0.02}
@@ -364,6 +364,13 @@ def test_a_name_that_promises_something_else_is_refused(
     with pytest.raises(UsageError) as caught:
         rough.write(tmp_path / name)
     assert found in caught.value.problems[0].found and not list(tmp_path.iterdir())
+
+
+def test_the_truth_does_not_depend_on_how_it_is_made_ready(
+        rough: Simulation, monkeypatch: pytest.MonkeyPatch) -> None:
+    whole = rough.truth()
+    monkeypatch.setattr(run, "ROWS_AT_ONCE", 7)
+    assert rough.truth() == whole
 
 
 def test_dots_in_a_name_stay(profile: Profile, tmp_path: Path) -> None:
