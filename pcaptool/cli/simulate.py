@@ -42,7 +42,7 @@ PROBABILITY = click.FloatRange(0, 1)
 @click.command(no_args_is_help=True)
 @click.argument("profile", metavar="PROFILE")
 @click.option("--out", "-o", required=True, type=click.Path(dir_okay=False, path_type=Path), metavar="FILE",
-              help="Capture to write: NAME.pcap, or NAME.pcap.gz. The truth is NAME.truth.csv beside it.")
+              help="Capture to write: NAME.pcap, with NAME.truth.csv beside it; NAME.pcap.gz packs both.")
 @click.option("--plan", "plan_file", type=click.Path(dir_okay=False, path_type=Path), metavar="TOML",
               help="Plan file, instead of the options below; only --seed may stand beside it.")
 @click.option("--seed", type=click.IntRange(0), default=1, show_default=True,
