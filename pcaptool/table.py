@@ -32,8 +32,12 @@ FORMULA = ("=", "+", "-", "@", "\t", "\r", "＝", "＋", "－", "＠")
 
 
 def defused(text: str) -> str:
-    """Return text that no spreadsheet runs: an apostrophe goes before what looks like a formula."""
-    return "'" + text if text.startswith(FORMULA) else text
+    """Return text that no spreadsheet runs: an apostrophe goes before what looks like a formula.
+
+    A carriage return, which some readers take for the end of a row, is written as \\r.
+    """
+    text = "'" + text if text.startswith(FORMULA) else text
+    return text.replace("\r", "\\r")
 
 
 def time_text(ns: int) -> str:

@@ -87,7 +87,7 @@ def simulate(ctx: click.Context, /, profile: str, out: Path, plan_file: Path | N
     \b
     pcaptool simulate merrowdale --out demo.pcap --loss 0.01 --seed 7
     pcaptool simulate merrowdale --out fade.pcap --burst 0.0005,0.05,0.5
-    pcaptool simulate merrowdale --out boot.pcap.gz --restart 600 --restart 900:128
+    pcaptool simulate merrowdale --out b.pcap.gz --restart 600 --restart 900:128
     pcaptool simulate my-radio.toml --out day.pcap --plan day.toml --seed 2
 
     A plan says all of that link by link. day.toml may be:

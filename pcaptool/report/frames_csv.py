@@ -11,23 +11,18 @@ from pcaptool.table import defused
 
 
 def frames_to_csv(parquet: Path, path: Path) -> None:
-    """Write a frame table as CSV, row group by row group."""
+    """Write a frame table as CSV, row group by row group; the file appears whole or not at all."""
     beside = path.with_name(path.name + ".part")
-    source = pq.ParquetFile(parquet)
+    options = pacsv.WriteOptions(include_header=False, quoting_style="needed")
     try:
-        writer: pacsv.CSVWriter | None = None
-        for group in range(max(source.num_row_groups, 1)):
-            table = source.read_row_group(group) if source.num_row_groups else source.schema_arrow.empty_table()
-            plain = pa.table({name: _plain(table.column(name)) for name in table.column_names})
-            if writer is None:
-                options = pacsv.WriteOptions(quoting_style="needed")
-                writer = pacsv.CSVWriter(beside, plain.schema, write_options=options)
-            writer.write_table(plain)
-        if writer is not None:
-            writer.close()
+        with pq.ParquetFile(parquet) as source, open(beside, "wb") as sink:
+            sink.write((",".join(source.schema_arrow.names) + "\n").encode())
+            for group in range(source.num_row_groups):
+                table = source.read_row_group(group)
+                plain = pa.table({name: _plain(table.column(name)) for name in table.column_names})
+                pacsv.write_csv(plain, sink, options)
         os.replace(beside, path)
     finally:
-        source.close()
         beside.unlink(missing_ok=True)
 
 
@@ -42,5 +37,6 @@ def _plain(column: pa.ChunkedArray) -> pa.ChunkedArray:
     if pa.types.is_timestamp(column.type):
         import pyarrow.compute as pc
 
-        return pc.strftime(column, format="%Y-%m-%dT%H:%M:%SZ", locale="C")
+        local = column.cast(pa.timestamp("ns"))        # needs no time zone database
+        return pc.strftime(local, format="%Y-%m-%dT%H:%M:%SZ", locale="C")
     return column
