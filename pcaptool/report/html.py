@@ -10,7 +10,7 @@ from pcaptool.table import time_text, write_whole
 
 Row = Mapping[str, object]
 MOST_PICTURES = 400     # links with a picture; the table has them all
-MOST_GAPS = 50          # longest gaps shown
+MOST_GAPS = 20          # longest gaps shown
 
 
 def write_html(path: Path, summary: dict[str, object], links: Sequence[Row], captures: Sequence[Row],
@@ -50,4 +50,4 @@ def rate(value: object, digits: int = 3) -> str:
 
 def when(value: object) -> str:
     """Return a time to the millisecond, a dash when missing."""
-    return "–" if value is None else time_text(int(str(value)))[:23].replace("T", " ") + " UTC"
+    return "–" if value is None else time_text(int(str(value)))[:23].replace("T", " ")

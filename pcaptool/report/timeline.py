@@ -16,7 +16,7 @@ MOST_BARS = 200
 
 @dataclass(frozen=True, slots=True)
 class Timeline:
-    """What the template draws: paths by state, headroom line, axis marks."""
+    """What the template draws: paths by state, headroom strokes, axis marks."""
 
     paths: dict[str, str]
     headroom: str
@@ -57,7 +57,7 @@ def timeline(rows: Sequence[Row], begin: int, end: int) -> Timeline | None:
                 base[b] += count
         if path:
             paths[state] = "".join(path)
-    return Timeline(paths, _line(worst, step), _marks(begin, begin + bins * width), most,
+    return Timeline(paths, _level(worst, step), _marks(begin, begin + bins * width), most,
                     f"{_time(begin)} to {_time(begin + bins * width)} UTC, one bar for {_span(width * merge)}")
 
 
@@ -65,15 +65,10 @@ def _int(value: object) -> int:
     return int(value) if isinstance(value, int) else 0
 
 
-def _line(worst: Sequence[float | None], step: float) -> str:
-    path, pen = [], "M"
-    for b, value in enumerate(worst):
-        if value is None:
-            pen = "M"
-            continue
-        path.append(f"{pen}{LEFT + (b + 0.46) * step:.1f} {TOP + HEIGHT * (1 - max(value, 0)):.1f}")
-        pen = "L"
-    return "".join(path)
+def _level(worst: Sequence[float | None], step: float) -> str:
+    """Return a short stroke for every bar that has a headroom; not joined, since bars are counts apart."""
+    return "".join(f"M{LEFT + b * step:.1f} {TOP + HEIGHT * (1 - max(value, 0)):.1f}h{step * 0.92:.1f}"
+                   for b, value in enumerate(worst) if value is not None)
 
 
 def _time(ns: int) -> str:
