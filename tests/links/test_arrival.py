@@ -121,7 +121,8 @@ def test_extend_by_hand(counter, extended, elapsed, advance, verdict, resolved):
     assert extend(counter, extended, 256, int(elapsed * SECOND), SECOND, 16, True) == (advance, verdict, resolved)
 
 
-def test_batches_of_any_size_give_the_same(rng=np.random.default_rng(4)):
+def test_batches_of_any_size_give_the_same():
+    rng = np.random.default_rng(4)
     counters = np.cumsum(rng.choice([1, 1, 1, 1, 3, 9], 400)) % 256
     whole = run(counters.tolist(), modulo=256, interval=1)
     links, gaps, n_gaps = new_links(1, np.array([SECOND])), np.zeros(500, GAP), 0

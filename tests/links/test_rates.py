@@ -5,6 +5,7 @@ import pytest
 
 from pcaptool.links.rates import effective_count, rate_interval, wilson
 
+
 def two_state(rng, n, p, r):
     """A two-state chain in its stationary distribution, one step at a time; True is lost."""
     chance, state, out = rng.random(n), rng.random() < p / (p + r), np.zeros(n, np.bool_)
