@@ -4,6 +4,7 @@ pyarrow's own conversion asks whether a value is a pandas object and imports pan
 costs a short run a tenth of a second.
 """
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -28,6 +29,13 @@ def arrow_array(values: NDArray[Any], missing: NDArray[np.bool_] | None = None,
         return pa.Array.from_buffers(pa.bool_(), n, [valid, data], nulls)
     data = pa.py_buffer(np.ascontiguousarray(values))
     return pa.Array.from_buffers(kind or pa.from_numpy_dtype(values.dtype), n, [valid, data], nulls)
+
+
+def arrow_strings(words: Sequence[str]) -> pa.Array:
+    """Return an arrow array of strings."""
+    octets = [word.encode() for word in words]
+    ends = np.cumsum([0, *(len(o) for o in octets)], dtype=np.int32)
+    return pa.Array.from_buffers(pa.string(), len(octets), [None, pa.py_buffer(ends), pa.py_buffer(b"".join(octets))])
 
 
 def numpy_column(array: pa.Array) -> NDArray[Any]:

@@ -10,7 +10,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
-from pcaptool.audit.arrow import arrow_array, numpy_column
+from pcaptool.audit.arrow import arrow_array, arrow_strings, numpy_column
 from pcaptool.audit.merge import Chunk
 from pcaptool.audit.piece import field_columns, integer_type, is_message_field
 from pcaptool.coding.chain import REASONS
@@ -197,12 +197,12 @@ def _sorted_label(label: pa.DictionaryArray) -> pa.DictionaryArray:
     place[order] = np.arange(len(order))
     missing = ~numpy_column(label.is_valid()) if label.null_count else None
     return pa.DictionaryArray.from_arrays(arrow_array(place[codes], missing),
-                                          pa.array([words[i] for i in order], pa.string()), safe=False)
+                                          arrow_strings([words[i] for i in order]), safe=False)
 
 
 def _label(codes: NDArray[Any], words: Sequence[str], missing: NDArray[np.bool_] | None = None) -> pa.Array:
     indices = arrow_array(codes.astype(np.int32), missing)
-    return pa.DictionaryArray.from_arrays(indices, pa.array(words, pa.string()), safe=False)
+    return pa.DictionaryArray.from_arrays(indices, arrow_strings(words), safe=False)
 
 
 def _field_array(field: WrapperField | Field, raw: NDArray[Any], absent: NDArray[np.bool_] | None,

@@ -7,7 +7,7 @@ that frames can be handed on as soon as nothing earlier can come, with only the 
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 import pyarrow as pa
@@ -17,7 +17,7 @@ from pcaptool.audit.arrow import numpy_column
 from pcaptool.audit.piece import Part
 
 Columns = dict[str, NDArray[Any]]
-LAST = np.iinfo(np.int64).max
+EARLIEST, LAST = np.iinfo(np.int64).min, np.iinfo(np.int64).max
 
 
 @dataclass(slots=True)
@@ -68,7 +68,7 @@ class _Stream:
     def read(self) -> Chunk:
         if not self._readers:
             paths = (self.source.part.path, self.source.part.errors_path)
-            self._readers = [iter(pa.ipc.open_stream(pa.OSFile(str(path)))) for path in paths]
+            self._readers = [iter(pa.ipc.open_stream(pa.memory_map(str(path)))) for path in paths]
         frames, errors = (next(r) for r in self._readers)
         self._next += 1
         if self.least == LAST:
@@ -89,18 +89,37 @@ class _Stream:
         return Chunk(columns, numpy_column(errors.column(0)), numpy_column(errors.column(1)))
 
 
-def merge(sources: Sequence[Source]) -> Iterator[Chunk]:
-    """Yield all frames of the sources in canonical order."""
-    streams = [_Stream(s) for s in sources if s.part.frames]
+class Supply(Protocol):
+    """Where sources come from: those taken over already, and those still pending."""
+
+    sources: list[Source]
+
+    @property
+    def bound(self) -> int: ...
+
+    def take_over(self) -> list[Source]: ...
+
+
+def merge(profile: int, supply: Supply) -> Iterator[Chunk]:
+    """Yield all frames of a profile in canonical order; pending sources are taken over when needed."""
+    streams = [_Stream(s) for s in supply.sources if s.part.profile == profile and s.part.frames]
     pool: list[Chunk] = []
-    while streams:
-        first = min(streams, key=lambda s: (s.least, s.source.rank))
+    while streams or supply.bound != LAST:
+        first = min(streams, key=lambda s: (s.least, s.source.rank), default=None)
+        if supply.bound != LAST and (first is None or supply.bound <= first.least):
+            fresh = supply.take_over()
+            streams += [_Stream(s) for s in fresh if s.part.profile == profile and s.part.frames]
+            continue
+        assert first is not None
         pool.append(first.read())
         streams = [s for s in streams if s.least != LAST]
-        bound, bound_rank = min(((s.least, s.source.rank) for s in streams), default=(LAST, 0))
+        unread = [(s.least, s.source.rank) for s in streams]
+        bound, bound_rank = min([*unread, (supply.bound, -1)])
         ready, pool = _ready(pool, bound, bound_rank)
         if ready is not None:
             yield ready
+    if pool:
+        yield _ready(pool, LAST, -1)[0] or pool[0]
 
 
 def _ready(pool: list[Chunk], bound: int, bound_rank: int) -> tuple[Chunk | None, list[Chunk]]:

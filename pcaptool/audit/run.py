@@ -1,21 +1,22 @@
 """Run an audit: survey the captures, decode their pieces, follow the links, draw up the accounts."""
 
 import tempfile
-from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import Executor, Future, ThreadPoolExecutor
+from collections.abc import Callable, Sequence
+from concurrent.futures import Executor, ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
-from pcaptool.audit.accounts import CAPTURE_SHIFT, CaptureAccount, check_identity, total_ledger
+from pcaptool.audit.accounts import CaptureAccount, check_identity, total_ledger
 from pcaptool.audit.executor import Inline, processes
 from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
-from pcaptool.audit.merge import Chunk, Source, merge
+from pcaptool.audit.merge import LAST, Chunk, merge
 from pcaptool.audit.naming import short_names
-from pcaptool.audit.piece import Job, PieceResult, decode_piece
+from pcaptool.audit.piece import Job, decode_piece
+from pcaptool.audit.pieces import Pieces
 from pcaptool.capture import sha256, survey
 from pcaptool.capture.survey import PIECE_BYTES
 from pcaptool.links.follow import FrameSlice, LinkFollower
@@ -96,11 +97,10 @@ class _Run:
         self.options, self.profiles, self.scratch, self.problems = options, profiles, scratch, problems
         names = short_names(paths)
         total = sum(p.stat().st_size for p in paths if p.is_file())
-        self.total_bytes, self.done_bytes, self.frames = total, 0, 0
+        self.total_bytes = total
         self.own = options.executor is None
         many = options.jobs > 1 and total >= WORTH_PROCESSES
         self.executor: Executor = options.executor or (processes(options.jobs) if many else Inline())
-        self.pending: list[tuple[int, Future[PieceResult]]] = []
         self.captures: list[CaptureAccount] = []
         self.hashing = ThreadPoolExecutor(1)
         for path in paths:
@@ -112,10 +112,16 @@ class _Run:
             digest = self.hashing.submit(sha256, path)
             self.captures.append(CaptureAccount(names[path], found, digest))
         self.captures.sort(key=lambda c: c.rank_key)
+        pending = []
         for index, capture in enumerate(self.captures):
             for number, piece in enumerate(capture.survey.pieces):
                 job = Job(piece, profiles, scratch, f"{index}-{number}")
-                self.pending.append((index, self.executor.submit(decode_piece, job)))
+                pending.append((index, piece, self.executor.submit(decode_piece, job)))
+        self.pieces = Pieces(self.captures, pending, profiles, scratch, self.problems, self._progress)
+
+    def _progress(self, done: int, frames: int) -> None:
+        if self.options.progress:
+            self.options.progress(done, self.total_bytes, frames)
 
     def close(self) -> None:
         self.hashing.shutdown(cancel_futures=True)
@@ -126,52 +132,25 @@ class _Run:
         follower = LinkFollower(self.profiles)
         folder_of_table = self.scratch if self.options.frames else None
         table = FrameTable(folder_of_table, self.profiles, [c.name for c in self.captures])
-        sources = list(self._sources())
         hashed: list[dict[int, tuple[int, ...]]] = [{} for _ in self.profiles]
-        for source in sources:
-            hashed[source.part.profile] |= source.part.hashed
         outside = 0
         for index in range(len(self.profiles)):
             known: Numbering | None = None
-            if follower.makers[index].needs_message:
+            if follower.makers[index].needs_message:        # a damaged key is judged by all that were usable
                 known = Numbering()
-                for source in sources:
+                while self.pieces.bound != LAST:
+                    self.pieces.take_over()
+                for source in self.pieces.sources:
                     if source.part.profile == index:
                         known.number(source.part.usable_keys)
-            mine = [s for s in sources if s.part.profile == index]
-            for chunk in merge(mine):
+            for chunk in merge(index, self.pieces):
+                for source in self.pieces.sources:
+                    hashed[source.part.profile] |= source.part.hashed
                 outside += self._follow(index, chunk, follower, known, table, hashed)
+        while self.pieces.bound != LAST:                    # of captures in which no profile found a frame
+            self.pieces.take_over()
         table.close()
         return self._report(follower, hashed, table, folder, outside)
-
-    def _sources(self) -> Iterator[Source]:
-        """Yield the parts of all pieces, in the canonical order of captures and pieces."""
-        rank, shift = 0, 0
-        left = []
-        for index, future in self.pending:
-            piece = future.result()
-            capture = self.captures[index]
-            shift = capture.add(piece, shift)
-            for part in piece.parts:
-                yield Source(part, index, rank, capture.shifts[-1])
-                self.frames += part.frames
-            left += capture.open_fragments(piece, index)
-            rank += 1
-            number = len(capture.shifts)
-            self.done_bytes += capture.survey.size * number // len(capture.survey.pieces) \
-                - capture.survey.size * (number - 1) // len(capture.survey.pieces)
-            if self.options.progress:
-                self.options.progress(self.done_bytes, self.total_bytes, self.frames)
-        if left:
-            left.sort(key=lambda f: (f.order, f.packet))
-            job = Job(None, self.profiles, self.scratch, "fragments", tuple(left))
-            piece = decode_piece(job)
-            for entry, fragments in piece.fragments.items():
-                for fragment in fragments:
-                    owner = self.captures[fragment.packet >> CAPTURE_SHIFT]
-                    owner.entries[entry] += 1
-            for part in piece.parts:
-                yield Source(part, -1, -1, 0)
 
     def _follow(self, profile: int, chunk: Chunk, follower: LinkFollower, known: Numbering | None,
                 table: FrameTable, hashed: list[dict[int, tuple[int, ...]]]) -> int:

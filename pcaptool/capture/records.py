@@ -27,6 +27,7 @@ class Piece:
     start: int = 0          # byte offset; 0: from the file header on
     stop: int = WHOLE_FILE
     first_packet: int = 0
+    least_time: int | None = None   # ns, of all its records; None: not looked at
 
 
 @dataclass(slots=True)

@@ -5,6 +5,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from pcaptool.capture.datagrams import Account
 from pcaptool.capture.records import Piece, read_records
@@ -36,28 +37,41 @@ def sha256(path: Path) -> str:
 def survey(path: Path, piece_bytes: int | None = PIECE_BYTES, hashed: bool = False) -> Survey:
     """Survey a capture; raises CaptureError when it is none.
 
-    piece_bytes  a plain pcap file larger than this is cut at records about so many bytes apart, so
-                 that its pieces can be decoded at once; None: never
+    piece_bytes  a plain pcap file is walked and cut at records about so many bytes apart, so that its
+                 pieces can be decoded at once, and the least time in each is told; None: neither
     hashed       also its SHA-256, in the same pass; without it, and without pieces to cut, no more
                  than the beginning is read
     """
     digest = hashlib.sha256() if hashed else None
     account, records = Account(), Records()
     size = path.stat().st_size if path.is_file() else 0
-    pieces, first_time, packets, last_cut, first_packet = [], None, 0, 0, 0
+    pieces: list[Piece] = []
+    first_time, least_time = None, None
+    packets = last_cut = first_packet = 0
+    walked = False              # to the end, so that the least time is known
     for block in read_records(Piece(path), account, records, hash=digest):
         if first_time is None:
             first_time = int(records.time[0])
-        cuttable = piece_bytes is not None and not account.compression and account.format.startswith("pcap,") \
-            and size > piece_bytes
+        cuttable = piece_bytes is not None and not account.compression and account.format.startswith("pcap,")
         if not cuttable and not digest:
             break
         begins = block.base + records.start[: block.count] - HEADER
+        done = 0                # records of the block that lie in pieces cut already
         while cuttable and int(begins[-1]) >= last_cut + (piece_bytes or 0):
             i = int(np.searchsorted(begins, last_cut + (piece_bytes or 0)))
-            pieces.append(Piece(path, last_cut, int(begins[i]), first_packet))
-            last_cut, first_packet = int(begins[i]), packets + i
+            least_time = _least(least_time, records.time[done:i])
+            pieces.append(Piece(path, last_cut, int(begins[i]), first_packet, least_time))
+            last_cut, first_packet, least_time, done = int(begins[i]), packets + i, None, i
+        least_time = _least(least_time, records.time[done : block.count])
         packets += block.count
-    pieces.append(Piece(path, last_cut, first_packet=first_packet))
+    else:
+        walked = piece_bytes is not None and account.format.startswith("pcap,") and not account.compression
+    pieces.append(Piece(path, last_cut, first_packet=first_packet, least_time=least_time if walked else None))
     return Survey(path, size, pieces, first_time, account.format, account.compression,
                   digest.hexdigest() if digest else "")
+
+
+def _least(least: int | None, times: NDArray[np.int64]) -> int | None:
+    if not len(times):
+        return least
+    return int(times.min()) if least is None else min(least, int(times.min()))

@@ -56,7 +56,9 @@ def gap_rows(follower: LinkFollower, names: Sequence[str], dropped: Sequence[tup
     split = split_losses(gateway, gaps["from_order"], gaps["to_order"], lost, events["link"], events["from_order"],
                          events["to_order"], events["missing"], in_drops)
     begin, end = gaps["from_order"] - gaps["shift"], gaps["to_order"] - gaps["shift"]
-    order = sorted(range(len(gaps)), key=lambda i: (natural(names[int(gaps["link"][i])]), int(gaps["from_order"][i])))
+    place = np.empty(len(names), np.int64)
+    place[sorted(range(len(names)), key=lambda i: natural(names[i]))] = np.arange(len(names))
+    order = np.lexsort((gaps["from_order"], place[gaps["link"]]))
     modulo = links.modulo[gaps["link"]] if len(gaps) else np.zeros(0, np.int64)
     rows: list[Row] = [{
         "link": names[int(gaps["link"][i])],
