@@ -190,12 +190,17 @@ def _canonical(table: pa.Table) -> pa.Table:
 
 def _sorted_label(label: pa.DictionaryArray) -> pa.DictionaryArray:
     words = label.dictionary.to_pylist()
-    codes = numpy_column(label.indices.fill_null(0))
+    codes = numpy_column(label.indices)
+    valid = label.buffers()[0]
+    missing = None
+    if label.null_count:
+        bits = np.unpackbits(np.frombuffer(valid, np.uint8), bitorder="little")
+        missing = bits[label.offset : label.offset + len(label)] == 0
+        codes = np.where(missing, 0, codes)
     used = np.flatnonzero(np.bincount(codes, minlength=len(words))) if len(codes) else np.zeros(0, np.int64)
     order = sorted(used.tolist(), key=lambda i: words[i])
     place = np.zeros(max(len(words), 1), np.int32)
     place[order] = np.arange(len(order))
-    missing = ~numpy_column(label.is_valid()) if label.null_count else None
     return pa.DictionaryArray.from_arrays(arrow_array(place[codes], missing),
                                           arrow_strings([words[i] for i in order]), safe=False)
 

@@ -172,9 +172,14 @@ def integer_type(bits: int) -> np.dtype[np.signedinteger]:
 
 
 def to_arrow(frames: FrameBatch, decoder: FrameDecoder) -> pa.RecordBatch:
-    """Return a batch as arrow columns: PLAIN, then fields, with ``present:NAME`` behind each message field."""
-    arrays, names = [], list(PLAIN)
-    for name in PLAIN:
+    """Return a batch as arrow columns: PLAIN but what the profile has no use for, then the fields.
+
+    Behind each message field stands ``present:NAME``.
+    """
+    unused: tuple[str, ...] = () if decoder.link.needs_message else ("home",)
+    unused += () if decoder.backhaul else ("backhaul", "backhaul_key")
+    arrays, names = [], [name for name in PLAIN if name not in unused]
+    for name in list(names):
         arrays.append(arrow_array(getattr(frames, name)))
     for name, kind in field_columns(decoder.profile):
         arrays.append(arrow_array(frames.fields[name].astype(kind)))

@@ -225,6 +225,7 @@ class _Run:
 
 
 def _slice(profile: int, chunk: Chunk) -> FrameSlice:
-    return FrameSlice(profile, **{name: chunk.columns[name] for name in SLICE})
+    key = chunk.columns["key"]      # stands for columns that the profile has no use for
+    return FrameSlice(profile, **{name: chunk.columns.get(name, key) for name in SLICE})
 
 

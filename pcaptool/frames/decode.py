@@ -152,6 +152,7 @@ class FrameDecoder:
                 key[~present[part.reference]] = NO_KEY
         if self.link.needs_message:
             key[message.reason == SHORT] = NO_KEY
+        home = self.link.make(columns, n, message=False) if self.link.needs_message else key
         counter = np.full(n, NO_COUNTER, np.int64)
         if self.profile.counter:
             name = self.profile.counter.field
@@ -162,16 +163,16 @@ class FrameDecoder:
         if self.backhaul and self.profile.backhaul:
             backhaul = columns[self.profile.backhaul.counter]
             backhaul_key = self.backhaul.make(columns, n)
-        ports = (d.source_port[rows].astype(np.uint64) << np.uint64(16)) | d.destination_port[rows]
-        hashes = digest(d.buffer, d.start[rows], d.held[rows], d.source[rows], d.destination[rows], ports,
-                        d.ident[rows])
-        which = np.searchsorted(rows, air.row)
+        hashes = digest(d.buffer, d.start, d.held, d.source, d.destination, d.source_port, d.destination_port,
+                        d.ident, rows)
+        if len(air.row) != len(rows) or self.unwrapper.many:
+            hashes = hashes[np.searchsorted(rows, air.row)]
         keep = usable[message.error_frame]
         return FrameBatch(
             d.packet[air.row], d.time[air.row], d.order[air.row], air.slot.astype(np.int16),
-            np.where(air.slot == 0, d.records[air.row], 0).astype(np.int32), hashes[which], state,
+            np.where(air.slot == 0, d.records[air.row], 0).astype(np.int32), hashes, state,
             message.reason, wrong, message.headroom, (air.held * 8).astype(np.int32), counter, key,
-            self.link.make(columns, n, message=False), backhaul, backhaul_key, fields, present,
+            home, backhaul, backhaul_key, fields, present,
             message.error_frame[keep], message.error_position[keep],
             int((udp_checksum_ok(d, rows) == 0).sum()),
         )
