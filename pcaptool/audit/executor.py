@@ -1,34 +1,13 @@
-"""Where pieces are decoded: here, in processes of our own, or in any executor that is handed in."""
+"""Processes that decode pieces beside this one; any other executor can be handed in instead."""
 
 import multiprocessing
 import sys
-from collections.abc import Callable
-from concurrent.futures import Executor, Future, ProcessPoolExecutor
-from typing import ParamSpec, TypeVar
-
-P = ParamSpec("P")
-T = TypeVar("T")
+from concurrent.futures import ProcessPoolExecutor
 
 
-class Inline(Executor):
-    """Runs each task when its result is asked for, in this thread."""
-
-    def submit(self, fn: Callable[P, T], /, *args: P.args, **kwargs: P.kwargs) -> Future[T]:
-        return _Lazy(lambda: fn(*args, **kwargs))
-
-
-class _Lazy(Future[T]):
-    def __init__(self, work: Callable[[], T]) -> None:
-        super().__init__()
-        self._work = work
-
-    def result(self, timeout: float | None = None) -> T:
-        if not self.done():
-            self.set_result(self._work())
-        return super().result(timeout)
-
-
-def processes(jobs: int) -> ProcessPoolExecutor:
+def processes(workers: int) -> ProcessPoolExecutor:
     """Return an executor of worker processes; forked where that is safe, so that they start warm."""
     method = "fork" if sys.platform == "linux" else "spawn"
-    return ProcessPoolExecutor(jobs, mp_context=multiprocessing.get_context(method))
+    pool = ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context(method))
+    pool.submit(int)        # starts the workers now, before this process has threads of its own
+    return pool

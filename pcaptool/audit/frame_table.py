@@ -19,7 +19,8 @@ from pcaptool.frames.table import ARRIVALS, CORRECTED, CORRUPTED, ERRORS, FRAMES
 from pcaptool.profile import Field, Profile, WrapperField
 from pcaptool.table import Column
 
-ROW_GROUP = 1 << 18
+ROW_GROUP = 1 << 17
+STATIC = ("capture", "profile", "state", "arrival", "reason")     # labels whose words are the same in every chunk
 LABEL = pa.dictionary(pa.int32(), pa.string())
 TYPES = {"label": LABEL, "timestamp": pa.timestamp("ns", "UTC")}
 
@@ -180,7 +181,9 @@ def _canonical(table: pa.Table) -> pa.Table:
     columns = []
     for name in table.column_names:
         column = table.column(name)
-        if pa.types.is_dictionary(column.type):
+        if name in STATIC:
+            columns.append(column.combine_chunks())
+        elif pa.types.is_dictionary(column.type):
             whole = column.unify_dictionaries().combine_chunks()
             columns.append(_sorted_label(whole if isinstance(whole, pa.DictionaryArray) else whole.chunk(0)))
         else:

@@ -11,15 +11,18 @@ from pathlib import Path
 from pcaptool.audit.accounts import CAPTURE_SHIFT, CaptureAccount
 from pcaptool.audit.merge import EARLIEST, LAST, Source
 from pcaptool.audit.piece import Job, PieceResult, decode_piece
-from pcaptool.capture import OpenFragment, Piece
+from pcaptool.capture import OpenFragment
 from pcaptool.problem import CaptureError, Problem
 from pcaptool.profile import Profile
 
 
 class Pieces:
-    """Pieces still pending, and the sources of those taken over."""
+    """Pieces still pending, and the sources of those taken over.
 
-    def __init__(self, captures: Sequence[CaptureAccount], pending: Sequence[tuple[int, Piece, Future[PieceResult]]],
+    A piece that has no future, or one that has not begun, is decoded here.
+    """
+
+    def __init__(self, captures: Sequence[CaptureAccount], pending: Sequence[tuple[int, Job, Future[PieceResult] | None]],
                  profiles: tuple[Profile, ...], scratch: Path, problems: list[Problem],
                  progress: Callable[[int, int], None]) -> None:
         self.sources: list[Source] = []
@@ -28,8 +31,9 @@ class Pieces:
         self._pending = list(pending)
         self._next = self._shift = self._frames = self._bytes = 0
         bound, bounds = LAST, [LAST]
-        for _, piece, _ in reversed(self._pending):
-            bound = min(bound, EARLIEST if piece.least_time is None else piece.least_time)
+        for _, job, _ in reversed(self._pending):
+            least = job.piece.least_time if job.piece else None
+            bound = min(bound, EARLIEST if least is None else least)
             bounds.append(bound)
         self._bounds = bounds[::-1]
 
@@ -51,11 +55,11 @@ class Pieces:
         return fresh
 
     def _one(self) -> tuple[list[Source], list[OpenFragment]]:
-        index, piece, future = self._pending[self._next]
+        index, job, future = self._pending[self._next]
         capture, rank = self._captures[index], self._next
         self._next += 1
         try:
-            result = future.result()
+            result = decode_piece(job) if future is None or future.cancel() else future.result()
         except CaptureError as error:       # it changed or went since it was surveyed
             self._problems += error.problems
             return [], []

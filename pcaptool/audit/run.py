@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pcaptool.audit.accounts import CaptureAccount, check_identity, total_ledger
-from pcaptool.audit.executor import Inline, processes
+from pcaptool.audit.executor import processes
 from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
 from pcaptool.audit.merge import LAST, Chunk, merge
@@ -38,8 +38,8 @@ class Options:
     end: int | None = None              # ns; frames from then on are left out
     links: tuple[str, ...] = ()         # names to keep, * and ? allowed; empty: all
     frames: bool = True                 # leave the frame table
-    jobs: int = 1
-    executor: Executor | None = None    # instead of processes of our own
+    jobs: int = 1                       # processes, this one included
+    executor: Executor | None = None    # for the pieces, instead of processes of our own
     progress: Progress | None = None
 
 
@@ -100,23 +100,24 @@ class _Run:
         self.total_bytes = total
         self.own = options.executor is None
         many = options.jobs > 1 and total >= WORTH_PROCESSES
-        self.executor: Executor = options.executor or (processes(options.jobs) if many else Inline())
+        self.executor: Executor | None = options.executor or (processes(options.jobs - 1) if many else None)
         self.captures: list[CaptureAccount] = []
         self.hashing = ThreadPoolExecutor(1)
+        digests = {path: self.hashing.submit(sha256, path) for path in paths}
         for path in paths:
             try:
                 found = survey(path, PIECE_BYTES if many else None)
             except CaptureError as error:
                 self.problems += error.problems
                 continue
-            digest = self.hashing.submit(sha256, path)
-            self.captures.append(CaptureAccount(names[path], found, digest))
+            self.captures.append(CaptureAccount(names[path], found, digests[path]))
         self.captures.sort(key=lambda c: c.rank_key)
-        pending = []
-        for index, capture in enumerate(self.captures):
-            for number, piece in enumerate(capture.survey.pieces):
-                job = Job(piece, profiles, scratch, f"{index}-{number}")
-                pending.append((index, piece, self.executor.submit(decode_piece, job)))
+        jobs = [(index, Job(piece, profiles, scratch, f"{index}-{number}"))
+                for index, capture in enumerate(self.captures)
+                for number, piece in enumerate(capture.survey.pieces)]
+        first = 1 if self.own else 0    # this process takes the first piece while its workers begin with others
+        pending = [(index, job, self.executor.submit(decode_piece, job) if self.executor and number >= first else None)
+                   for number, (index, job) in enumerate(jobs)]
         self.pieces = Pieces(self.captures, pending, profiles, scratch, self.problems, self._progress)
 
     def _progress(self, done: int, frames: int) -> None:
@@ -125,7 +126,7 @@ class _Run:
 
     def close(self) -> None:
         self.hashing.shutdown(cancel_futures=True)
-        if self.own:
+        if self.own and self.executor:
             self.executor.shutdown(cancel_futures=True)
 
     def result(self, folder: "tempfile.TemporaryDirectory[str]") -> AuditResult:

@@ -14,7 +14,7 @@ from pcaptool.capture.walk import DAMAGED, MORE
 from pcaptool.capture.walkers import PCAP_HEADER, PCAP_MAGICS, PcapngWalker, PcapWalker, Records, Walker
 from pcaptool.problem import CaptureError, Problem
 
-BLOCK = 2 << 20             # bytes read at a time
+BLOCK = 8 << 20             # bytes read at a time
 WHOLE_FILE = 1 << 62
 PCAPNG_MAGIC = b"\x0a\x0d\x0d\x0a"
 

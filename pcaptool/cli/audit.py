@@ -48,6 +48,7 @@ def audit(ctx: click.Context, captures: tuple[str, ...], profiles: tuple[str, ..
         from pcaptool.cli.progress import progress
         from pcaptool.report import audit as run
 
+        gc.freeze()             # what was loaded stays; only what the audit makes is looked through
         gc.enable()
         with progress(quiet) as show:
             options = Options(begin=time_of(begin, "--from"), end=time_of(end, "--until"), links=links,

@@ -33,6 +33,12 @@ def _positions(order: tuple[int, ...], unit: int, n: int) -> tuple[NDArray[np.in
     return forward, np.argsort(forward)
 
 
+@lru_cache(maxsize=256)
+def _by_columns(rows: int, columns: int) -> tuple[int, ...]:
+    """Return the places of a block, written row by row, in the order they are sent, column by column."""
+    return tuple(row * columns + column for column in range(columns) for row in range(rows))
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Interleave(Step):
     """Symbols in another order: written row by row and sent column by column, or as listed.
@@ -65,8 +71,7 @@ class Interleave(Step):
     @property
     def sent(self) -> tuple[int, ...]:
         """The symbol sent at every place of a block."""
-        return self.order or tuple(
-            row * self.columns + column for column in range(self.columns) for row in range(self.rows))
+        return self.order or _by_columns(self.rows, self.columns)
 
     @property
     def block(self) -> int:

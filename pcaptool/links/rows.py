@@ -60,14 +60,17 @@ def gap_rows(follower: LinkFollower, names: Sequence[str], dropped: Sequence[tup
     place[sorted(range(len(names)), key=lambda i: natural(names[i]))] = np.arange(len(names))
     order = np.lexsort((gaps["from_order"], place[gaps["link"]]))
     modulo = links.modulo[gaps["link"]] if len(gaps) else np.zeros(0, np.int64)
-    rows: list[Row] = [{
-        "link": names[int(gaps["link"][i])],
-        "counter_before": int(gaps["before"][i] % modulo[i]), "counter_after": int(gaps["after"][i] % modulo[i]),
-        "missing": int(gaps["missing"][i]), "corrupted": int(corrupted[i]), "lost": int(lost[i]),
-        "lost_air": int(split.air[i]), "lost_backhaul": int(split.backhaul[i]),
-        "lost_undecided": int(split.undecided[i]), "from": int(begin[i]), "to": int(end[i]),
-        "resolved_by": RESOLVED[gaps["resolved"][i]],
-    } for i in order]
+    columns: dict[str, list[object]] = {
+        "link": [names[k] for k in gaps["link"][order].tolist()],
+        "counter_before": (gaps["before"] % modulo)[order].tolist(),
+        "counter_after": (gaps["after"] % modulo)[order].tolist(),
+        "missing": gaps["missing"][order].tolist(), "corrupted": corrupted[order].tolist(),
+        "lost": lost[order].tolist(), "lost_air": split.air[order].tolist(),
+        "lost_backhaul": split.backhaul[order].tolist(), "lost_undecided": split.undecided[order].tolist(),
+        "from": begin[order].tolist(), "to": end[order].tolist(),
+        "resolved_by": [RESOLVED[k] for k in gaps["resolved"][order].tolist()],
+    }
+    rows: list[Row] = [dict(zip(columns, values, strict=True)) for values in zip(*columns.values(), strict=True)]
     return Gaps(gaps["link"], gaps["missing"], corrupted, split, begin, end, rows)
 
 
