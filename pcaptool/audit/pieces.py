@@ -28,6 +28,7 @@ class Pieces:
         self.sources: list[Source] = []
         self._captures, self._profiles, self._scratch, self._problems = captures, profiles, scratch, problems
         self._progress = progress
+        self._early: dict[int, PieceResult] = {}
         self._pending = list(pending)
         self._next = self._shift = self._frames = self._bytes = 0
         bound, bounds = LAST, [LAST]
@@ -55,11 +56,11 @@ class Pieces:
         return fresh
 
     def _one(self) -> tuple[list[Source], list[OpenFragment]]:
-        index, job, future = self._pending[self._next]
+        index = self._pending[self._next][0]
         capture, rank = self._captures[index], self._next
         self._next += 1
         try:
-            result = decode_piece(job) if future is None or future.cancel() else future.result()
+            result = self._result(rank)
         except CaptureError as error:       # it changed or went since it was surveyed
             self._problems += error.problems
             return [], []
@@ -69,6 +70,21 @@ class Pieces:
         self._progress(self._bytes, self._frames)
         sources = [Source(part, index, rank, capture.shifts[-1]) for part in result.parts]
         return sources, capture.open_fragments(result, index)
+
+    def _result(self, rank: int) -> PieceResult:
+        """Return the result of a piece; decode pieces that nobody has begun, the last first, rather than wait."""
+        _, job, future = self._pending[rank]
+        if rank in self._early:
+            return self._early.pop(rank)
+        if future is None or future.cancel():
+            return decode_piece(job)
+        last = len(self._pending)
+        while not future.done() and last > rank + 1:
+            last -= 1
+            _, other, others = self._pending[last]
+            if last not in self._early and others is not None and others.cancel():
+                self._early[last] = decode_piece(other)
+        return future.result()
 
     def _fragments(self, left: list[OpenFragment]) -> list[Source]:
         """Decode datagrams whose fragments lie in several pieces, and account for each fragment."""
