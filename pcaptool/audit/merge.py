@@ -60,6 +60,7 @@ class _Stream:
         self._least = [*np.minimum.accumulate(least[::-1])[::-1].tolist(), LAST]
         self._next = 0
         self._readers: list[Iterator[pa.RecordBatch]] = []
+        self._files: list[pa.OSFile] = []
 
     @property
     def least(self) -> int:
@@ -68,11 +69,15 @@ class _Stream:
     def read(self) -> Chunk:
         if not self._readers:
             paths = (self.source.part.path, self.source.part.errors_path)
-            self._readers = [iter(pa.ipc.open_stream(pa.memory_map(str(path)))) for path in paths]
+            self._files = [pa.OSFile(str(path)) for path in paths]
+            self._readers = [iter(pa.ipc.open_stream(file)) for file in self._files]
         frames, errors = (next(r) for r in self._readers)
         self._next += 1
-        if self.least == LAST:
-            self._readers = []
+        if self.least == LAST:          # read to the end: the disk is free for others
+            for file in self._files:
+                file.close()
+            self.source.part.path.unlink()
+            self.source.part.errors_path.unlink()
         columns: Columns = {
             name: numpy_column(values)
             for name, values in zip(frames.schema.names, frames.columns, strict=True)
