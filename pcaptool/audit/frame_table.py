@@ -70,7 +70,7 @@ class _RowGroups:
     """
 
     def __init__(self, path: Path, schema: pa.Schema, size: int, thread: ThreadPoolExecutor, **options: Any) -> None:
-        self._writer = pq.ParquetWriter(path, schema, compression="zstd", compression_level=1, **options)
+        self._writer = pq.ParquetWriter(path, schema, compression="snappy", **options)
         self._schema, self._size, self._thread = schema, size, thread
         self._waiting: list[pa.RecordBatch] = []
         self._rows = 0

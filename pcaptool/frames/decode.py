@@ -82,7 +82,8 @@ class FrameDecoder:
         if proof is not None:
             undamaged, data = proof.run(d.buffer, air.start[members])
             good, members = members[undamaged], members[~undamaged]
-            data = data[undamaged]
+            if len(members):
+                data = data[undamaged]
             if proof.inner == 0:
                 message.prove(good, data[:, : proof.words], proof.width, self.chain.corrects)
             else:

@@ -17,14 +17,15 @@ def read_fields(
     buffer: NDArray[np.uint8], start: NDArray[np.int64], spec: NDArray[np.int64], values: NDArray[np.int64]
 ) -> None:
     """Read byte fields: values int64 (field, row) from spec rows (offset, bytes, big, signed)."""
-    for i in range(len(start)):
-        for f in range(len(spec)):
-            offset, size, big, signed = spec[f, 0], spec[f, 1], spec[f, 2], spec[f, 3]
+    for f in range(len(spec)):
+        offset, size, big, signed = spec[f, 0], spec[f, 1], spec[f, 2], spec[f, 3]
+        step = np.uint64(1 if big else -1)              # wraps: from the last byte back
+        for i in range(len(start)):
             value = np.int64(0)
-            first = start[i] + offset
-            for k in range(size):
-                byte = np.int64(buffer[first + (k if big else size - 1 - k)])
-                value = (value << 8) | byte
+            at = np.uint64(start[i] + offset + (0 if big else size - 1))
+            for _ in range(size):
+                value = (value << 8) | np.int64(buffer[at])
+                at += step
             if signed and size < 8 and value >> (8 * size - 1):
                 value -= np.int64(1) << (8 * size)
             values[f, i] = value
@@ -166,26 +167,27 @@ class Unwrapper:
                end: NDArray[np.int64], cursor: NDArray[np.int64], fields: dict[str, NDArray[np.int64]],
                alive: NDArray[np.int64], slot: int) -> tuple[AirFrames, NDArray[np.int64]]:
         """Return frame number ``slot`` of every datagram that has one, and which datagrams go on."""
-        own = {name: values[alive] for name, values in fields.items()}
+        at = slice(None) if len(alive) == len(rows) else alive      # all of them: no copies
+        own = {name: values[at] for name, values in fields.items()}
+        begin, bytes_held, last = start[at], held[at], end[at]
+        place = cursor[at]
         if self.each.fields:
-            there = cursor[alive] + self.each.bytes <= np.minimum(held[alive], end[alive])
-            values = self.each.read(d.buffer, np.where(there, start[alive] + cursor[alive], 0))
+            there = place + self.each.bytes <= np.minimum(bytes_held, last)
+            values = self.each.read(d.buffer, np.where(there, begin + place, 0))
             values[:, ~there] = 0
             own |= {f.name: v for f, v in zip(self.each.fields, values, strict=True)}
-            cursor[alive] += self.each.bytes
-        left = np.maximum(end[alive] - cursor[alive], 0)
+            place = place + self.each.bytes
         announced = self.wrapper.frame_bytes
         if announced is None:
-            sent = left
+            sent = np.maximum(last - place, 0)
         elif isinstance(announced, int):
             sent = np.full(len(alive), announced, np.int64)
         else:
             sent = np.maximum(own[announced] + self.wrapper.frame_bytes_plus, 0)
-        there_bytes = np.clip(np.minimum(held[alive], end[alive]) - cursor[alive], 0, None)
-        first = start[alive] + cursor[alive]
-        cursor[alive] += sent
-        frames = AirFrames(rows[alive], np.full(len(alive), slot, np.int64), first,
+        there_bytes = np.maximum(np.minimum(bytes_held, last) - place, 0)
+        frames = AirFrames(rows[at], np.full(len(alive), slot, np.int64), begin + place,
                            np.minimum(sent, there_bytes), sent, own)
+        cursor[at] = place + sent
         return frames, alive[sent > 0] if self.many else alive
 
 

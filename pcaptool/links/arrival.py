@@ -16,6 +16,7 @@ RESOLVED = ("counter", "time", "time, uncertain")
 
 # A jump that time cannot judge is a restart past this many frames; RFC 3550, A.1, MAX_DROPOUT.
 MAX_DROPOUT = 3000
+WAYS = 8                    # datagrams of which one bucket of find_copies knows; a power of two
 SAMPLES = 65                # intervals of which the median is taken
 LEAST_SAMPLES = 5
 
@@ -279,7 +280,7 @@ def follow(
 @njit(cache=True, nogil=True)
 def find_copies(
     digest: NDArray[np.uint64], slot: NDArray[np.int16], order: NDArray[np.int64],
-    table: NDArray[np.uint64], table_time: NDArray[np.int64], last: NDArray[np.bool_],
+    table: NDArray[np.uint64], table_time: NDArray[np.int64], turn: NDArray[np.int64], last: NDArray[np.bool_],
     window: int, window_without_ident: int,
 ) -> NDArray[np.bool_]:
     """Return which frames lie in a datagram that was recorded before, within the window.
@@ -287,27 +288,30 @@ def find_copies(
     The same addresses, ports, IP identification and bytes make the same datagram. A radio repeat is
     forwarded in a new datagram with an identification of its own; where there is none, only copies
     within the much shorter window_without_ident (ns) count.
-    table, table_time  (bucket, way)  digests seen lately; changed
-    last               bool (1,)      verdict on the datagram of the frame before; changed
+    table, table_time  (WAYS * bucket,)  digests seen lately, and when; changed. Frames come by time, so
+                       the oldest of a bucket is replaced by going round it
+    turn               int64 (bucket,)   way to replace next; changed
+    last               bool (1,)         verdict on the datagram of the frame before; changed
     """
     copies = np.zeros(len(digest), np.bool_)
-    buckets, ways = table.shape
+    buckets = np.uint64(len(turn) - 1)
     for i in range(len(digest)):
         if slot[i] > 0:
             copies[i] = last[0]
             continue
         d = digest[i]
-        bucket = np.int64((d >> np.uint64(20)) % np.uint64(buckets))
-        span = window if d & np.uint64(1) else window_without_ident
-        found, oldest = False, 0
-        for w in range(ways):
-            if table[bucket, w] == d and abs(order[i] - table_time[bucket, w]) <= span:
-                found = True
-                break
-            if table_time[bucket, w] < table_time[bucket, oldest]:
-                oldest = w
+        bucket = (d >> np.uint64(20)) & buckets
+        first = bucket * np.uint64(WAYS)
+        found = False
+        for w in range(WAYS):
+            at = first + np.uint64(w)
+            if table[at] == d:
+                span = window if d & np.uint64(1) else window_without_ident
+                found = found or abs(order[i] - table_time[at]) <= span
         if not found:
-            table[bucket, oldest] = d
-            table_time[bucket, oldest] = order[i]
+            at = first + np.uint64(turn[bucket])
+            table[at] = d
+            table_time[at] = order[i]
+            turn[bucket] = (turn[bucket] + 1) % WAYS
         copies[i] = last[0] = found
     return copies

@@ -8,14 +8,14 @@ from numpy.typing import NDArray
 
 from pcaptool.frames.keys import KeyMaker
 from pcaptool.frames.table import NO_COUNTER, NO_KEY
-from pcaptool.links.arrival import GAP, LINK_STATE, SAMPLES, find_copies, follow, new_links
+from pcaptool.links.arrival import GAP, LINK_STATE, SAMPLES, WAYS, find_copies, follow, new_links
 from pcaptool.links.bins import Bins
 from pcaptool.links.numbering import Numbering
 from pcaptool.profile import Profile
 
 COPY_WINDOW = 1_000_000_000             # ns in which a datagram recorded again is a copy ...
 COPY_WINDOW_WITHOUT_IDENT = 1_000_000   # ... and when it has no IP identification
-BUCKETS, WAYS = 1 << 13, 8
+BUCKETS = 1 << 13           # a power of two
 NO_GROUP = np.zeros(0, np.int64)
 MOST_HOMES = 1 << 32
 HOME = 1 << 63                          # marks the key of a link's home: frames of no known link
@@ -107,13 +107,14 @@ class LinkFollower:
         self.gateway_numbering = [Numbering() for _ in profiles]
         self.gateway_of: list[NDArray[np.int64]] = [np.zeros(0, np.int64) for _ in profiles]
         self.link_gateway = np.zeros(0, np.int64)               # the gateway that a link was last heard by
-        self._table = np.zeros((BUCKETS, WAYS), np.uint64)
-        self._table_time = np.full((BUCKETS, WAYS), np.iinfo(np.int64).min // 2, np.int64)
+        self._table = np.zeros(BUCKETS * WAYS, np.uint64)
+        self._table_time = np.full(BUCKETS * WAYS, np.iinfo(np.int64).min // 2, np.int64)
+        self._turn = np.zeros(BUCKETS, np.int64)
         self._last = np.zeros(1, np.bool_)
 
     def copies(self, f: FrameSlice) -> NDArray[np.bool_]:
         """Return which frames lie in a datagram that was recorded before."""
-        return find_copies(f.digest, f.slot, f.order, self._table, self._table_time, self._last,
+        return find_copies(f.digest, f.slot, f.order, self._table, self._table_time, self._turn, self._last,
                            COPY_WINDOW, COPY_WINDOW_WITHOUT_IDENT)
 
     def add(self, f: FrameSlice, known: Numbering | None) -> tuple[NDArray[np.int64], NDArray[np.uint8]]:
