@@ -1,8 +1,16 @@
-"""Processes that decode pieces beside this one; any other executor can be handed in instead."""
+"""Who does the work beside this thread: processes that decode pieces, and a thread for hashes and encoding.
+
+Any other executor can be handed in for the pieces.
+"""
 
 import multiprocessing
 import sys
-from concurrent.futures import ProcessPoolExecutor
+from collections.abc import Callable
+from concurrent.futures import Executor, Future, ProcessPoolExecutor, ThreadPoolExecutor
+from typing import ParamSpec, TypeVar
+
+P = ParamSpec("P")
+T = TypeVar("T")
 
 
 def processes(workers: int) -> ProcessPoolExecutor:
@@ -11,3 +19,20 @@ def processes(workers: int) -> ProcessPoolExecutor:
     pool = ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context(method))
     pool.submit(int)        # starts the workers now, before this process has threads of its own
     return pool
+
+
+class _AtOnce(Executor):
+    """Does what is submitted before it returns."""
+
+    def submit(self, fn: Callable[P, T], /, *args: P.args, **kwargs: P.kwargs) -> Future[T]:
+        future: Future[T] = Future()
+        try:
+            future.set_result(fn(*args, **kwargs))
+        except Exception as error:
+            future.set_exception(error)
+        return future
+
+
+def beside(jobs: int) -> Executor:
+    """Return an executor for what can go on beside this thread; with one job, one core does everything."""
+    return ThreadPoolExecutor(1) if jobs > 1 else _AtOnce()

@@ -1,7 +1,7 @@
 """The frame table on disk: from merged chunks to frames.parquet and errors.parquet."""
 
 from collections.abc import Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
+from concurrent.futures import Executor, Future
 from pathlib import Path
 from typing import Any
 
@@ -11,6 +11,7 @@ import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
 from pcaptool.audit.arrow import arrow_array, arrow_strings, numpy_column
+from pcaptool.audit.executor import beside
 from pcaptool.audit.merge import Chunk
 from pcaptool.audit.piece import field_columns, integer_type, is_message_field
 from pcaptool.coding.chain import REASONS
@@ -66,10 +67,10 @@ def _field_column(profile: Profile, source: str, name: str) -> Column:
 class _RowGroups:
     """A Parquet file whose row groups have a fixed size, however the rows arrive.
 
-    Encoding runs in a thread of its own while the next rows are made ready.
+    Encoding goes on beside this thread while the next rows are made ready.
     """
 
-    def __init__(self, path: Path, schema: pa.Schema, size: int, thread: ThreadPoolExecutor, **options: Any) -> None:
+    def __init__(self, path: Path, schema: pa.Schema, size: int, thread: Executor, **options: Any) -> None:
         self._writer = pq.ParquetWriter(path, schema, compression="snappy", **options)
         self._schema, self._size, self._thread = schema, size, thread
         self._waiting: list[pa.RecordBatch] = []
@@ -105,13 +106,14 @@ class _RowGroups:
 class FrameTable:
     """Takes merged chunks with their links and arrivals; without a folder it only counts them."""
 
-    def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str]) -> None:
+    def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str],
+                 jobs: int) -> None:
         self.columns = columns_of(profiles)
         self.schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in self.columns])
         self.errors_schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in ERRORS])
         self.profiles, self.captures = profiles, list(captures)
         self.rows = 0
-        self._thread = ThreadPoolExecutor(1)
+        self._thread = beside(jobs)
         self._frames: _RowGroups | None = None
         self._errors: _RowGroups | None = None
         if folder is not None:

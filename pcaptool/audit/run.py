@@ -2,7 +2,7 @@
 
 import tempfile
 from collections.abc import Callable, Sequence
-from concurrent.futures import Executor, ThreadPoolExecutor
+from concurrent.futures import Executor
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pcaptool.audit.accounts import CaptureAccount, check_identity, total_ledger
-from pcaptool.audit.executor import processes
+from pcaptool.audit.executor import beside, processes
 from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
 from pcaptool.audit.merge import LAST, Chunk, merge
@@ -38,7 +38,7 @@ class Options:
     end: int | None = None              # ns; frames from then on are left out
     links: tuple[str, ...] = ()         # names to keep, * and ? allowed; empty: all
     frames: bool = True                 # leave the frame table
-    jobs: int = 1                       # processes, this one included
+    jobs: int = 1                       # processes, this one included; 1: one core does everything
     executor: Executor | None = None    # for the pieces, instead of processes of our own
     progress: Progress | None = None
 
@@ -99,14 +99,15 @@ class _Run:
         total = sum(p.stat().st_size for p in paths if p.is_file())
         self.total_bytes = total
         self.own = options.executor is None
-        many = options.jobs > 1 and total >= WORTH_PROCESSES
+        large = total >= WORTH_PROCESSES
+        many = large and options.jobs > 1
         self.executor: Executor | None = options.executor or (processes(options.jobs - 1) if many else None)
         self.captures: list[CaptureAccount] = []
-        self.hashing = ThreadPoolExecutor(1)
+        self.hashing = beside(options.jobs)
         digests = {path: self.hashing.submit(sha256, path) for path in paths}
         for path in paths:
             try:
-                found = survey(path, PIECE_BYTES if many else None)
+                found = survey(path, PIECE_BYTES if large else None)
             except CaptureError as error:
                 self.problems += error.problems
                 continue
@@ -132,7 +133,7 @@ class _Run:
     def result(self, folder: "tempfile.TemporaryDirectory[str]") -> AuditResult:
         follower = LinkFollower(self.profiles)
         folder_of_table = self.scratch if self.options.frames else None
-        table = FrameTable(folder_of_table, self.profiles, [c.name for c in self.captures])
+        table = FrameTable(folder_of_table, self.profiles, [c.name for c in self.captures], self.options.jobs)
         hashed: list[dict[int, tuple[int, ...]]] = [{} for _ in self.profiles]
         outside = 0
         for index in range(len(self.profiles)):

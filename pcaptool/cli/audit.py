@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 @click.option("--link", "links", multiple=True, metavar="NAME", help="Only this link; * and ? allowed.")
 @click.option("--frames", type=click.Choice(["parquet", "csv", "none"]), default="parquet", show_default=True,
               help="How to leave the frame table.")
-@click.option("--jobs", "-j", type=click.IntRange(1), default=None, help="Processes; default one per core.")
+@click.option("--jobs", "-j", type=click.IntRange(1), default=None, help="Cores to use; default all.")
 @click.option("--json", "as_json", is_flag=True, help="Print the summary as JSON instead of the tables.")
 @click.option("--quiet", "-q", is_flag=True, help="No progress on stderr.")
 @click.pass_context
