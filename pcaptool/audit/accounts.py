@@ -6,8 +6,8 @@ from concurrent.futures import Future
 
 from pcaptool.audit.piece import PieceResult
 from pcaptool.capture import ENTRIES, Damage, OpenFragment, Survey, natural
+from pcaptool.capture.read import MOST_SHIFT, STEP_BACK
 
-STEP_BACK = 1_000_000_000
 CAPTURE_SHIFT = 40      # packets of fragments that cross pieces carry their capture above this bit
 
 
@@ -53,7 +53,7 @@ class CaptureAccount:
             back = before - piece.begin_time
             if back > STEP_BACK:
                 self.steps.append((piece.first_packet, before, piece.begin_time))
-                shift += back
+                shift = min(shift + back, MOST_SHIFT)
         self.shifts.append(shift)
         self._previous = piece.end_time if account.records else self._previous
         self.records += account.records
@@ -73,13 +73,13 @@ class CaptureAccount:
         self.first_time = min(times) if times else None
         times = [t for t in (self.last_time, account.last_time) if t is not None]
         self.last_time = max(times) if times else None
-        return shift + account.order_shift
+        return min(shift + account.order_shift, MOST_SHIFT)
 
     def open_fragments(self, piece: PieceResult, index: int) -> list[OpenFragment]:
         """Return the piece's open fragments, marked with the capture, their order shifted."""
         for fragment in piece.account.open_fragments:
             fragment.packet |= index << CAPTURE_SHIFT
-            fragment.order += self.shifts[-1]
+            fragment.order = min(fragment.order + self.shifts[-1], 2**63 - 2)
         return piece.account.open_fragments
 
     def copied(self, records: int) -> None:

@@ -51,12 +51,17 @@ class Chunk:
         return Chunk({n: v[rows] for n, v in self.columns.items()}, frame[kept], self.error_position[kept])
 
 
+def _shifted(order: NDArray[np.int64], shift: int) -> NDArray[np.int64]:
+    """Return later times; a hostile file's steps end at the last time there is."""
+    return np.minimum(order, LAST - 1 - shift) + shift
+
+
 class _Stream:
     """The batches of one source, with the least order of those not yet read."""
 
     def __init__(self, source: Source) -> None:
         self.source = source
-        least = np.array(source.part.least_order, np.int64) + source.shift
+        least = _shifted(np.array(source.part.least_order, np.int64), source.shift)
         self._least = [*np.minimum.accumulate(least[::-1])[::-1].tolist(), LAST]
         self._next = 0
         self._readers: list[Iterator[pa.RecordBatch]] = []
@@ -84,7 +89,7 @@ class _Stream:
         }
         n = frames.num_rows
         if self.source.shift:
-            columns["order"] = columns["order"] + self.source.shift
+            columns["order"] = _shifted(columns["order"], self.source.shift)
         if self.source.capture >= 0:
             columns["capture"] = np.full(n, self.source.capture, np.int32)
         else:

@@ -131,3 +131,19 @@ def test_a_clock_that_goes_back_is_told_and_keeps_the_recorded_order(capture, tm
     audit.close()
     assert steps == 1 and any("clock went back" in note for note in notes)
     assert restarts == 0
+
+
+def test_clocks_that_jump_over_the_whole_range_again_and_again_are_survived(capture, tmp_path, monkeypatch):
+    """A hostile file; the sum of its steps would not fit into the times of the tables."""
+    jumping = b""
+    for i, record in enumerate(records(capture)):
+        jumping += struct.pack("<I", (2**32 - 1 - i) if i % 2 else i) + record[4:]
+    for name in ("a.pcap", "b.pcap", "c.pcap"):
+        (tmp_path / name).write_bytes(capture[:24] + jumping)
+    monkeypatch.setattr("pcaptool.audit.run.WORTH_PROCESSES", 1)
+    monkeypatch.setattr("pcaptool.audit.run.PIECE_BYTES", 20_000)
+    audit = pcaptool.audit([tmp_path], profile="merrowdale")
+    ledger = audit.summary["ledger"]
+    audit.close()
+    assert ledger["records"] == 3 * len(records(capture))
+    assert ledger["frames"] > 0
