@@ -4,6 +4,7 @@ Any other executor can be handed in for the pieces.
 """
 
 import multiprocessing
+import signal
 import sys
 from collections.abc import Callable
 from concurrent.futures import Executor, Future, ProcessPoolExecutor, ThreadPoolExecutor
@@ -16,7 +17,9 @@ T = TypeVar("T")
 def processes(workers: int) -> ProcessPoolExecutor:
     """Return an executor of worker processes; forked where that is safe, so that they start warm."""
     method = "fork" if sys.platform == "linux" else "spawn"
-    pool = ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context(method))
+    pool = ProcessPoolExecutor(
+        workers, mp_context=multiprocessing.get_context(method),
+        initializer=signal.signal, initargs=(signal.SIGINT, signal.SIG_IGN))    # this process is interrupted for all
     pool.submit(int)        # starts the workers now, before this process has threads of its own
     return pool
 
