@@ -22,9 +22,9 @@ class Pieces:
     A piece that has no future, or one that has not begun, is decoded here.
     """
 
-    def __init__(self, captures: Sequence[CaptureAccount], pending: Sequence[tuple[int, Job, Future[PieceResult] | None]],
-                 profiles: tuple[Profile, ...], scratch: Path, problems: list[Problem],
-                 progress: Callable[[int, int], None]) -> None:
+    def __init__(self, captures: Sequence[CaptureAccount],
+                 pending: Sequence[tuple[int, Job, Future[PieceResult] | None]], profiles: tuple[Profile, ...],
+                 scratch: Path, problems: list[Problem], progress: Callable[[int, int], None]) -> None:
         self.sources: list[Source] = []
         self._captures, self._profiles, self._scratch, self._problems = captures, profiles, scratch, problems
         self._progress = progress

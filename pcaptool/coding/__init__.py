@@ -3,15 +3,18 @@
 ``STEPS`` names every coding step that a profile can use.
 """
 
+from pcaptool.coding.bch import Bch
 from pcaptool.coding.bit_order import BitOrder
 from pcaptool.coding.block_code import BlockCode
 from pcaptool.coding.chain import Chain
 from pcaptool.coding.checksum import Checksum
 from pcaptool.coding.crc import Crc
+from pcaptool.coding.golay import Golay
 from pcaptool.coding.hamming import Hamming
 from pcaptool.coding.interleave import Interleave
 from pcaptool.coding.length import Length
 from pcaptool.coding.pad import Pad
+from pcaptool.coding.reed_solomon import ReedSolomon
 from pcaptool.coding.repeat import Repeat
 from pcaptool.coding.step import Step
 from pcaptool.coding.sync import Sync
@@ -19,7 +22,8 @@ from pcaptool.coding.whiten import Whiten
 
 STEPS: dict[str, type[Step]] = {
     step.name: step
-    for step in (Crc, Checksum, Hamming, BlockCode, Repeat, Interleave, Whiten, BitOrder, Sync, Length, Pad)
+    for step in (Crc, Checksum, Hamming, BlockCode, Golay, Bch, ReedSolomon, Repeat, Interleave, Whiten, BitOrder,
+                 Sync, Length, Pad)
 }
 
 __all__ = ["STEPS", "Chain", "Step"]

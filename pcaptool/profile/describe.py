@@ -12,7 +12,7 @@ from pcaptool.profile.model import Field, Profile, WrapperField
 
 def describe(profile: Profile) -> str:
     """Return the profile's carrier, wrapper, chain in the transmitter's order, message and limits."""
-    lines = [f"{profile.name}: {profile.title}", *_wrapped("basis: " + profile.basis), ""]
+    lines = [*_wrapped(f"{profile.name}: {profile.title}"), *_wrapped("basis: " + profile.basis), ""]
     ports = ", ".join(str(p) for p in profile.carrier.port)
     nets = " in " + ", ".join(profile.carrier.net) if profile.carrier.net else ""
     opening = f", payload begins {profile.carrier.opening.hex(' ')}" if profile.carrier.opening else ""

@@ -135,7 +135,8 @@ def start_up(folder: Path) -> None:
 def memory(folder: Path, frames: int) -> None:
     one, four = (peak_mib(audit(make(folder, "normal", n, bit_error_rate=0.0001), folder / "out"))
                  for n in (frames, 4 * frames))
-    print(f"peak memory, capture four times as long                   {four / one:8.2f} times ({one:.0f} and {four:.0f} MiB)")
+    print(f"peak memory, capture four times as long                   {four / one:8.2f} times "
+          f"({one:.0f} and {four:.0f} MiB)")
 
 
 def main() -> None:

@@ -1,0 +1,36 @@
+"""Cyclic binary codes: systematic generator matrix and division of polynomials over GF(2)."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def remainder(value: int, poly: int) -> int:
+    """Return value mod poly; polynomials over GF(2) as numbers, bit i for x^i."""
+    size = poly.bit_length()
+    while value.bit_length() >= size:
+        value ^= poly << (value.bit_length() - size)
+    return value
+
+
+def product(a: int, b: int) -> int:
+    """Return the product of two polynomials over GF(2)."""
+    out = 0
+    while b:
+        if b & 1:
+            out ^= a
+        a, b = a << 1, b >> 1
+    return out
+
+
+def cyclic_generator(poly: int, n: int, k: int) -> NDArray[np.uint8]:
+    """Return the systematic generator matrix (k, n) of a cyclic code, shortened where n is less than its length.
+
+    Data first; behind them the remainder of x^(n-k) times the data by the generator polynomial.
+    """
+    r = n - k
+    out = np.zeros((k, n), np.uint8)
+    for i in range(k):
+        out[i, i] = 1
+        check = remainder(1 << (n - 1 - i), poly)
+        out[i, k:] = [check >> (r - 1 - j) & 1 for j in range(r)]
+    return out
