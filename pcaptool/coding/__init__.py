@@ -8,6 +8,7 @@ from pcaptool.coding.bit_order import BitOrder
 from pcaptool.coding.block_code import BlockCode
 from pcaptool.coding.chain import Chain
 from pcaptool.coding.checksum import Checksum
+from pcaptool.coding.convolutional import Convolutional
 from pcaptool.coding.crc import Crc
 from pcaptool.coding.golay import Golay
 from pcaptool.coding.hamming import Hamming
@@ -22,8 +23,8 @@ from pcaptool.coding.whiten import Whiten
 
 STEPS: dict[str, type[Step]] = {
     step.name: step
-    for step in (Crc, Checksum, Hamming, BlockCode, Golay, Bch, ReedSolomon, Repeat, Interleave, Whiten, BitOrder,
-                 Sync, Length, Pad)
+    for step in (Crc, Checksum, Hamming, BlockCode, Golay, Bch, ReedSolomon, Convolutional, Repeat, Interleave,
+                 Whiten, BitOrder, Sync, Length, Pad)
 }
 
 __all__ = ["STEPS", "Chain", "Step"]
