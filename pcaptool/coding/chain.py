@@ -192,6 +192,8 @@ class Chain:
             if i in group.checks:   # holds when only covered bits differ from what was received
                 word, data = group.checks[i]
                 agreed &= count_differences(bits, word) == count_differences(inner, data)
+        if bits.shape[1] != air.shape[1]:       # a wrong reading can be encoded to another length
+            bits = _fitted(bits, air.shape[1])
         misled = group.misled | (~agreed & (group.repaired > 0))
         reason[(reason == OK) & ~agreed] = CHECK_FAILED
         reason[(reason == CHECK_FAILED) & misled] = MISCORRECTED
@@ -203,6 +205,10 @@ class Chain:
         else:
             frame, position = np.zeros(0, np.int64), np.zeros(0, np.int32)
         out.add(group, reason, np.where(usable, wrong, -1).astype(np.int32), group.rows[frame], position)
+
+
+def _fitted(bits: Bits, width: int) -> Bits:
+    return np.ascontiguousarray(np.pad(bits, ((0, 0), (0, max(width - bits.shape[1], 0))))[:, :width])
 
 
 def _split(group: _Group, length: NDArray[np.int64] | None, side_length: NDArray[np.int64] | None = None,

@@ -87,6 +87,7 @@ class Step(ABC):
             frame: says where a frame begins or ends
     linear  ``encode`` is affine over GF(2) for a given data length and context, and ``strip`` is too
     needs   wrapper fields whose values ``encode`` and ``decode`` look up in their context
+    cuts    ``find`` cuts long rows, which hold several words or a piece of a stream, into words
     """
 
     __slots__ = ()
@@ -96,6 +97,10 @@ class Step(ABC):
     @property
     def linear(self) -> bool:
         return True
+
+    @property
+    def cuts(self) -> bool:
+        return False
 
     @property
     def needs(self) -> tuple[str, ...]:
@@ -130,6 +135,15 @@ class Step(ABC):
         ``encode(data, context, side) == word``.
         """
         raise TypeError(f"step {self.name} is not linear")
+
+
+    def find(self, bits: Bits, length: NDArray[np.int64]) -> tuple[
+            NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
+        """Return (row, begin, end) of every whole word in long rows, int64 (word,), ordered; steps that cut only.
+
+        bits uint8 (row, bit), of which the first ``length`` count. ``decode`` undoes each word on its own.
+        """
+        raise TypeError(f"step {self.name} does not cut")
 
 
 def whole(batch: Batch, bits: Bits, doubt: NDArray[np.uint8] | None = None, **rest: Any) -> Decoded:

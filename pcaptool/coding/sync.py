@@ -1,10 +1,11 @@
-"""Find the sync word that stands before the data, tolerating wrong bits."""
+"""Find the sync word that stands before the data, tolerating wrong bits; cut a stream at its sync words."""
 
 from dataclasses import dataclass
 from typing import Annotated, ClassVar
 
 import numpy as np
 from annotated_types import Ge
+from numpy.typing import NDArray
 from typing_extensions import Doc
 
 from pcaptool.coding.step import (
@@ -20,7 +21,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
-from pcaptool.coding.sync_kernel import find_word
+from pcaptool.coding.sync_kernel import all_words, find_word
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -29,6 +30,11 @@ class Sync(Step):
 
     The place with the fewest wrong bits is taken, the earliest of equals. Where none has at most
     ``tolerate`` wrong bits the check fails and the data are read as if it stood at the begin.
+
+    In a stream the words stand ``every`` so many bits. One is believed where the sync word behind it stands
+    in its place too, or the stream ends; then frames follow each other in lock. A sync word up to ``slip`` bits
+    beside its place is a bit slip, and the lock moves there; up to ``flywheel`` frames in a row are given
+    out though their sync word was not recognised.
     """
 
     name: ClassVar[str] = "sync"
@@ -37,6 +43,9 @@ class Sync(Step):
     word: Annotated[str, Doc('the word: hex octets, or bits written "0b..."')]
     tolerate: Annotated[int, Ge(0), Doc("wrong bits accepted")] = 0
     within: Annotated[int, Ge(0), Doc("bits that may stand before it")] = 0
+    every: Annotated[int, Ge(0), Doc("in a stream: bits from one sync word to the next")] = 0
+    slip: Annotated[int, Ge(0), Doc("in a stream: bits by which a word may come early or late")] = 0
+    flywheel: Annotated[int, Ge(0), Doc("in a stream: frames in a row whose sync word may be missed")] = 0
 
     def __post_init__(self) -> None:
         try:
@@ -50,6 +59,17 @@ class Sync(Step):
             raise ParameterError("tolerate", found=str(self.tolerate),
                                  expected=f"less than half of {size} bits",
                                  fix=f"set at most {(size - 1) // 2}")
+
+        if self.every and self.every <= size + 2 * self.slip:
+            raise ParameterError("every", found=str(self.every), expected=f"more than {size + 2 * self.slip}: the word "
+                                 "and the slip at either side", fix="count from one sync word's begin to the next")
+        if (self.slip or self.flywheel) and not self.every:
+            raise ParameterError("every", found="none, with slip or flywheel", expected="the distance of sync words",
+                                 fix="set every, or leave slip and flywheel out")
+
+    @property
+    def cuts(self) -> bool:
+        return self.every > 0
 
     @property
     def pattern(self) -> Bits:
@@ -100,5 +120,15 @@ class Sync(Step):
             out = whole(batch, data, doubt, side=side, side_length=best)
             out.length = width - size - best
         out.repaired[:] = errors
-        out.fault[missed] = CHECK_FAILED
+        if self.flywheel:               # its place is known from the frames before; wrong bits are just that
+            lost = np.flatnonzero(missed)
+            out.repaired[lost] = (batch.bits[lost, :size] != self.pattern).sum(axis=1)
+        else:
+            out.fault[missed] = CHECK_FAILED
         return out
+
+    def find(self, bits: Bits, length: NDArray[np.int64]) -> tuple[
+            NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
+        found = all_words(np.ascontiguousarray(bits), length, self.pattern, self.tolerate, self.every, self.slip,
+                          self.flywheel)
+        return found[:, 0], found[:, 1], found[:, 1] + self.every

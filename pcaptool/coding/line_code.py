@@ -1,0 +1,176 @@
+"""Line codes: how bits become levels on the line, and code violations."""
+
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Annotated, ClassVar, Literal
+
+import numpy as np
+from annotated_types import Ge, Le
+from numba import njit
+from numpy.typing import NDArray
+from typing_extensions import Doc
+
+from pcaptool.coding.step import (
+    NO_CONTEXT,
+    Batch,
+    Bits,
+    Context,
+    Decoded,
+    LengthError,
+    Step,
+    too_short,
+    whole,
+)
+
+# Four bits as six of which three are 1; EN 13757-4, table of the "3 out of 6" code, from memory.
+THREE_OF_SIX = (0x16, 0x0D, 0x0E, 0x0B, 0x1C, 0x19, 0x1A, 0x13, 0x2C, 0x25, 0x26, 0x23, 0x34, 0x31, 0x32, 0x29)
+ERASED = np.uint8(255)
+
+
+@njit(cache=True, nogil=True)
+def _levels(data: NDArray[np.uint8], toggle_on: int, level: int) -> NDArray[np.uint8]:
+    """Return levels that change where a bit is ``toggle_on``: uint8, the same shape."""
+    out = np.empty(data.shape, np.uint8)
+    for i in range(data.shape[0]):
+        now = np.uint8(level)
+        for j in range(data.shape[1]):
+            now ^= np.uint8(data[i, j] == toggle_on)
+            out[i, j] = now
+    return out
+
+
+@lru_cache(maxsize=1)
+def _nearest() -> tuple[NDArray[np.uint8], NDArray[np.bool_]]:
+    """Return (nibble of the nearest 3-out-of-6 word, whether it is one) for all words of six bits."""
+    distance = np.array([[(word ^ code).bit_count() for code in THREE_OF_SIX] for word in range(64)])
+    return distance.argmin(axis=1).astype(np.uint8), distance.min(axis=1) == 0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LineCode(Step):
+    """A line code. What cannot have been sent is read as the nearest that can, and erased for the decoder behind.
+
+    Source: IEEE 802.3 and IEEE 802.5 (Manchester, differential Manchester), EN 13757-4 (3 out of 6); NRZI and
+    differential coding by their definitions.
+    """
+
+    name: ClassVar[str] = "line_code"
+    role = "order"
+
+    kind: Annotated[Literal["manchester", "differential_manchester", "nrzi", "differential", "three_of_six"],
+                    Doc("nrzi: the level changes for a bit of toggle_on; differential: for a 1; "
+                        "differential_manchester: it changes in the middle of every bit, and at its begin for "
+                        "toggle_on")]
+    one: Annotated[Literal["01", "10"],
+                   Doc('manchester: what a 1 is sent as; "01" as in IEEE 802.3, "10" the other convention')] = "01"
+    toggle_on: Annotated[Literal[0, 1], Doc("nrzi, differential_manchester: the bit that changes the level")] = 0
+    level: Annotated[int, Ge(0), Le(1), Doc("the level before the first bit, where levels change")] = 0
+
+    @property
+    def linear(self) -> bool:
+        return self.kind != "three_of_six"
+
+    @property
+    def _changes(self) -> int:
+        """The bit that changes the level."""
+        return 1 if self.kind == "differential" else self.toggle_on
+
+    @property
+    def _ratio(self) -> tuple[int, int]:
+        """Data bits and the bits on the air that they become."""
+        return {"manchester": (1, 2), "differential_manchester": (1, 2), "three_of_six": (4, 6)}.get(self.kind, (1, 1))
+
+    def coded_bits(self, k: int) -> int:
+        data, air = self._ratio
+        if k % data:
+            raise LengthError(f"{k} bits are no whole number of groups of {data} for the line code {self.kind}")
+        return k // data * air
+
+    def data_bits(self, n: int) -> int:
+        data, air = self._ratio
+        if n % air:
+            raise LengthError(f"{n} bits are no whole number of symbols of {air} bits of the line code {self.kind}")
+        return n // air * data
+
+    def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
+        n = self.coded_bits(data.shape[1])
+        if self.kind in ("nrzi", "differential"):
+            return _levels(np.ascontiguousarray(data), self._changes, self.level)
+        out = np.empty((len(data), n), np.uint8)
+        if self.kind == "three_of_six":
+            words = np.array(THREE_OF_SIX, np.uint8)[_numbers(data, 4)]
+            return _bits(words, 6).reshape(len(data), n)
+        if self.kind == "manchester":
+            out[:, 0::2] = data if self.one == "10" else data ^ 1
+        else:   # the middle of every bit changes the level once more: half a bit on, it is that of twice as many bits
+            steps = np.empty((len(data), n), np.uint8)
+            steps[:, 0::2] = data == self.toggle_on
+            steps[:, 1::2] = 1
+            return _levels(steps, 1, self.level)
+        out[:, 1::2] = out[:, 0::2] ^ 1
+        return out
+
+    def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
+        self.data_bits(word.shape[1])
+        return self._read(word), None
+
+    def _read(self, word: Bits) -> Bits:
+        """Return the data of a word without violations, by an affine map."""
+        if self.kind == "manchester":
+            return word[:, 0::2] ^ np.uint8(self.one == "01")
+        before: Bits = np.empty((len(word), word.shape[1] // self._ratio[1]), np.uint8)
+        before[:, :1] = self.level
+        if self.kind == "differential_manchester":
+            before[:, 1:] = word[:, 1:-1:2]
+            return before ^ word[:, 0::2] ^ np.uint8(1 - self.toggle_on)
+        before[:, 1:] = word[:, :-1]
+        return before ^ word ^ np.uint8(1 - self._changes)
+
+    def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
+        word, doubt = batch.bits, batch.doubt
+        if word.shape[1] % self._ratio[1]:
+            return too_short(batch)
+        if self.kind == "three_of_six":
+            nibble, good = _nearest()
+            six = _numbers(word, 6)
+            unsure = np.where(good[six], np.uint8(0), ERASED)
+            if doubt is not None:
+                unsure = np.maximum(unsure, doubt.reshape(*six.shape, 6).max(axis=2))
+            data = _bits(nibble[six], 4).reshape(len(word), six.shape[1] * 4)
+            return whole(batch, data, _or_none(unsure.repeat(4, axis=1)))
+        data = self._read(word)
+        if self.kind in ("nrzi", "differential"):
+            if doubt is not None:
+                doubt = doubt.copy()
+                doubt[:, 1:] = np.maximum(doubt[:, 1:], batch.doubt[:, :-1])    # type: ignore[index]
+            return whole(batch, data, doubt)
+        first, second = word[:, 0::2], word[:, 1::2]
+        broken = first == second
+        if self.kind == "differential_manchester":      # the next bit is measured against the second half
+            broken = broken.copy()
+            broken[:, 1:] |= word[:, 0:-2:2] == word[:, 1:-2:2]
+        if doubt is None:
+            return whole(batch, data, _or_none(np.where(broken, ERASED, np.uint8(0))))
+        of_first, of_second = doubt[:, 0::2], doubt[:, 1::2]
+        if self.kind == "manchester":
+            data = np.where(broken & (of_second < of_first), data ^ 1, data)   # the surer half decides
+        apart = np.abs(of_first.astype(np.int16) - of_second).astype(np.uint8)
+        return whole(batch, data, np.where(broken, ERASED - apart, np.minimum(of_first, of_second)))
+
+
+def _or_none(doubt: NDArray[np.uint8]) -> NDArray[np.uint8] | None:
+    return doubt if doubt.any() else None
+
+
+def _numbers(bits: Bits, size: int) -> NDArray[np.uint8]:
+    """Return groups of bits as numbers, first bit most significant: uint8 (frame, group)."""
+    groups = bits.reshape(len(bits), bits.shape[1] // size, size)
+    out = np.zeros(groups.shape[:2], np.uint8)
+    for j in range(size):
+        out = out << 1 | groups[:, :, j]
+    return out
+
+
+def _bits(numbers: NDArray[np.uint8], size: int) -> Bits:
+    """Return numbers as bits, first bit most significant: uint8 (frame, group, size)."""
+    return (numbers[:, :, None] >> np.arange(size - 1, -1, -1, dtype=np.uint8) & 1).astype(np.uint8)
