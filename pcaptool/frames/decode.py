@@ -11,10 +11,10 @@ from numpy.typing import NDArray
 
 from pcaptool.capture import udp_checksum_ok
 from pcaptool.capture.datagrams import Datagrams
-from pcaptool.coding.bits import unpack_rows
 from pcaptool.coding.chain import BAD_FIELD, Outcome
 from pcaptool.coding.proof import Proof, compile_proof, linear_from
 from pcaptool.coding.step import OK, SHORT
+from pcaptool.frames.cut import Cutter, air_bits
 from pcaptool.frames.digest import digest
 from pcaptool.frames.fields import Layout, value_of
 from pcaptool.frames.keys import KeyMaker
@@ -46,10 +46,12 @@ class FrameDecoder:
         self.layout = Layout(profile)
         self.link = KeyMaker(profile, profile.link.by)
         self.backhaul = KeyMaker(profile, profile.backhaul.by) if profile.backhaul else None
+        self.cutter = Cutter(self.chain) if profile.wrapper.carries == "frames" else None
         self._inner = linear_from(self.chain)
         self._proofs: dict[tuple[int, ...], Proof | None] = {}
         self._seen: dict[tuple[int, ...], int] = defaultdict(int)
-        self._table_bytes = 0 if proofs else TABLE_BYTES
+        hard = proofs and not profile.wrapper.soft_bits
+        self._table_bytes = 0 if hard else TABLE_BYTES
 
     def decode(self, d: Datagrams, taken: NDArray[np.bool_]) -> tuple[FrameBatch, int]:
         """Return (frames of the datagrams that the profile claims, records cut too short to tell).
@@ -68,12 +70,55 @@ class FrameDecoder:
         message = _Messages(n, self.layout)
         enough = air.held >= air.sent
         message.reason[~enough | (air.held == 0)] = SHORT
+        if self.cutter:
+            air, message = self._cut(d, air, np.flatnonzero(message.reason != SHORT))
+            return self._table(d, rows, air, message)
         context = {name: air.fields[name] for name in self.chain.needs}
         groups: list[NDArray[np.int64]] = [air.held, *context.values()]
         todo = np.flatnonzero(message.reason != SHORT)
         for key, members in _group(groups, todo):
             self._decode_group(d, air, members, key, message)
         return self._table(d, rows, air, message)
+
+    def _air_bits(self, d: Datagrams, start: NDArray[np.int64], n_bytes: int
+                  ) -> tuple[NDArray[np.uint8], NDArray[np.uint8] | None]:
+        w = self.profile.wrapper
+        return air_bits(d.buffer, start, n_bytes, w.soft_bits, w.soft_one)
+
+    def _cut(self, d: Datagrams, air: AirFrames, whole: NDArray[np.int64]) -> tuple[AirFrames, "_Messages"]:
+        """Return the frames in air frames that hold several; an air frame without any is one that is short."""
+        assert self.cutter
+        cuts: list[tuple[NDArray[np.int64], Outcome]] = []
+        sources: list[NDArray[np.int64]] = []
+        begins: list[NDArray[np.int64]] = []
+        sizes: list[NDArray[np.int64]] = []
+        for key, members in _group([air.held], whole):
+            for at in range(0, len(members), DECODE_ROWS):
+                part = members[at : at + DECODE_ROWS]
+                bits, doubt = self._air_bits(d, air.start[part], key[0])
+                cut = self.cutter.cut(bits, doubt, {name: air.fields[name][part] for name in self.chain.needs})
+                first = sum(len(s) for s in sources)
+                cuts.append((np.arange(first, first + len(cut.row)), cut.outcome))
+                sources.append(part[cut.row])
+                begins.append(cut.begin)
+                sizes.append(cut.size)
+        found = np.concatenate([np.zeros(0, np.int64), *sources])
+        none = np.setdiff1d(np.arange(len(air.row)), found)
+        source = np.concatenate([found, none])
+        begin = np.concatenate([np.zeros(0, np.int64), *begins, np.zeros(len(none), np.int64)])
+        size = np.concatenate([np.zeros(0, np.int64), *sizes, air.bits[none]])
+        order = np.lexsort((begin, source))
+        place = np.empty_like(order)
+        place[order] = np.arange(len(order))
+        message = _Messages(len(order), self.layout)
+        message.reason[:] = SHORT
+        for rows, outcome in cuts:
+            message.fill(place[rows], outcome)
+        frames = air.take(source[order])
+        frames.bits = size[order]
+        new = np.flatnonzero(np.diff(frames.row, prepend=-1))
+        frames.slot = np.arange(len(order)) - np.repeat(new, np.diff(np.append(new, len(order))))
+        return frames, message
 
     def _decode_group(self, d: Datagrams, air: AirFrames, members: NDArray[np.int64], key: tuple[int, ...],
                       message: "_Messages") -> None:
@@ -92,9 +137,9 @@ class FrameDecoder:
                     message.fill(good[part], self._decode_inner(proof, data[part], air, good[part]))
         for at in range(0, len(members), DECODE_ROWS):
             part_rows = members[at : at + DECODE_ROWS]
-            bits = unpack_rows(d.buffer, air.start[part_rows], key[0])
+            bits, doubt = self._air_bits(d, air.start[part_rows], key[0])
             context = {name: air.fields[name][part_rows] for name in self.chain.needs}
-            message.fill(part_rows, self.chain.decode(bits, None, context))
+            message.fill(part_rows, self.chain.decode(bits, None, context, doubt))
 
     def _decode_inner(self, proof: Proof, data: NDArray[np.uint64], air: AirFrames,
                       rows: NDArray[np.int64]) -> Outcome:
@@ -166,13 +211,13 @@ class FrameDecoder:
             backhaul_key = self.backhaul.make(columns, n)
         hashes = digest(d.buffer, d.start, d.held, d.source, d.destination, d.source_port, d.destination_port,
                         d.ident, rows)
-        if len(air.row) != len(rows) or self.unwrapper.many:
+        if len(air.row) != len(rows) or self.unwrapper.many or self.cutter:
             hashes = hashes[np.searchsorted(rows, air.row)]
         keep = usable[message.error_frame]
         return FrameBatch(
             d.packet[air.row], d.time[air.row], d.order[air.row], air.slot.astype(np.int16),
             np.where(air.slot == 0, d.records[air.row], 0).astype(np.int32), hashes, state,
-            message.reason, wrong, message.headroom, (air.held * 8).astype(np.int32), counter, key,
+            message.reason, wrong, message.headroom, air.bits.astype(np.int32), counter, key,
             home, backhaul, backhaul_key, fields, present,
             message.error_frame[keep], message.error_position[keep],
             int((udp_checksum_ok(d, rows) == 0).sum()),

@@ -68,6 +68,7 @@ class AirFrames:
     start   int64 (frame,)   first byte in the batch's buffer
     held    int64 (frame,)   bytes that are there
     sent    int64 (frame,)   bytes that the wrapper announces; more than held: short
+    bits    int64 (frame,)   bits received on the air
     fields  name -> int64 (frame,)  wrapper fields
     """
 
@@ -76,11 +77,12 @@ class AirFrames:
     start: NDArray[np.int64]
     held: NDArray[np.int64]
     sent: NDArray[np.int64]
+    bits: NDArray[np.int64]
     fields: dict[str, NDArray[np.int64]]
 
     def take(self, keep: NDArray[np.int64]) -> "AirFrames":
         return AirFrames(self.row[keep], self.slot[keep], self.start[keep], self.held[keep], self.sent[keep],
-                         {name: v[keep] for name, v in self.fields.items()})
+                         self.bits[keep], {name: v[keep] for name, v in self.fields.items()})
 
 
 class Unwrapper:
@@ -185,8 +187,9 @@ class Unwrapper:
         else:
             sent = np.maximum(own[announced] + self.wrapper.frame_bytes_plus, 0)
         there_bytes = np.maximum(np.minimum(bytes_held, last) - place, 0)
-        frames = AirFrames(rows[at], np.full(len(alive), slot, np.int64), begin + place,
-                           np.minimum(sent, there_bytes), sent, own)
+        there_bytes = np.minimum(sent, there_bytes)
+        frames = AirFrames(rows[at], np.full(len(alive), slot, np.int64), begin + place, there_bytes, sent,
+                           there_bytes * self.wrapper.bits_per_byte, own)
         cursor[at] = place + sent
         return frames, alive[sent > 0] if self.many else alive
 
@@ -194,10 +197,11 @@ class Unwrapper:
 def _in_order(parts: Sequence[AirFrames], names: Sequence[str]) -> AirFrames:
     empty = np.zeros(0, np.int64)
     if not parts:
-        return AirFrames(empty, empty, empty, empty, empty, dict.fromkeys(names, empty))
+        return AirFrames(empty, empty, empty, empty, empty, empty, dict.fromkeys(names, empty))
     row = np.concatenate([p.row for p in parts])
     order = np.argsort(row, kind="stable")
     fields = {name: np.concatenate([p.fields[name] for p in parts]) for name in parts[0].fields}
     joined = AirFrames(row, np.concatenate([p.slot for p in parts]), np.concatenate([p.start for p in parts]),
-                       np.concatenate([p.held for p in parts]), np.concatenate([p.sent for p in parts]), fields)
+                       np.concatenate([p.held for p in parts]), np.concatenate([p.sent for p in parts]),
+                       np.concatenate([p.bits for p in parts]), fields)
     return joined.take(order)

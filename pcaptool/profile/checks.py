@@ -72,6 +72,16 @@ def _wrapper(profile: Profile) -> Iterator[Problem]:
             if f.must_be is not None and not (-top // 2 if f.signed else 0) <= f.must_be < top:
                 yield _problem(profile, f"wrapper.{where}[{i}].must_be", hex(f.must_be),
                                f"a value that fits in {f.bytes} bytes", "set bytes or must_be right")
+    cutting = [step.name for step in profile.coding if step.cuts]
+    if w.carries != "frame" and not cutting:
+        yield _problem(profile, "wrapper.carries", f'"{w.carries}", and no step that finds frames',
+                       "bit_stuffing, or sync with every, in the chain", "add the step, or leave carries out")
+    if w.carries == "stream" and (w.each or w.frames is not None):
+        yield _problem(profile, "wrapper.carries", '"stream" with several air frames in a datagram',
+                       "one piece of the stream in each", "leave each and frames out")
+    if w.stream_by and w.carries != "stream":
+        yield _problem(profile, "wrapper.stream_by", 'given with carries = "' + w.carries + '"', 'carries = "stream"',
+                       "leave stream_by out")
     if w.each and w.frames is None and w.frame_bytes is None:
         yield _problem(profile, "wrapper.each", "fields before every frame, and no size of a frame",
                        "frame_bytes or frames", "say how long an air frame is")
@@ -84,11 +94,12 @@ def _references(profile: Profile) -> Iterator[Problem]:
     if profile.backhaul:
         references.append(("backhaul.counter", profile.backhaul.counter))
         references += [(f"backhaul.by[{i}]", r) for i, r in enumerate(profile.backhaul.by)]
+    references += [(f"wrapper.stream_by[{i}]", r) for i, r in enumerate(profile.wrapper.stream_by)]
     for place, reference in references:
         known = [*profile.message_fields, *(f"wrapper.{n}" for n in profile.wrapper_fields)]
-        if place.startswith("link") or place.startswith("backhaul.by"):
+        if place.startswith(("link", "backhaul.by", "wrapper")):
             known += CARRIER
-        if place.startswith("backhaul"):
+        if place.startswith(("backhaul", "wrapper")):
             known = [k for k in known if "." in k]
         if reference not in known:
             near = get_close_matches(reference, known, 1)
@@ -157,10 +168,10 @@ def _counters(profile: Profile) -> Iterator[Problem]:
 def _lengths(profile: Profile) -> Iterator[Problem]:
     """Check that air frames of a fixed size can be undone, and hold the fields."""
     size = profile.wrapper.frame_bytes
-    if not isinstance(size, int):
+    if not isinstance(size, int) or profile.wrapper.carries != "frame":
         return
     try:
-        k = profile.chain.data_bits(size * 8)
+        k = profile.chain.data_bits(size * profile.wrapper.bits_per_byte)
     except LengthError as error:
         yield _problem(profile, "wrapper.frame_bytes", f"{size} bytes of air frame", "a size that the chain can undo",
                        f"check the sizes of the steps ({error})")

@@ -34,7 +34,7 @@ def _int_keys(value: object) -> object:
     return value
 
 
-Octets = Annotated[bytes, BeforeValidator(_octets), WithJsonSchema({"type": "string", "pattern": "^[0-9A-Fa-f ]*$"})]
+Octets = Annotated[bytes, BeforeValidator(_octets), WithJsonSchema({"type": "string", "pattern": r"^[0-9A-Fa-f\s]*$"})]
 Names = Annotated[dict[int, str], BeforeValidator(_int_keys),
                   WithJsonSchema({"type": "object", "additionalProperties": {"type": "string"}})]
 NOTHING: Any = ()
@@ -84,8 +84,25 @@ class Wrapper(Strict):
     frame_bytes: Annotated[int | str | None, Key(description="bytes of an air frame: a number, a field, or "
                                                              "absent: all that is left")] = None
     frame_bytes_plus: Annotated[int, Key(description="added to the field of frame_bytes")] = 0
+    carries: Annotated[Literal["frame", "frames", "stream"],
+                       Key(description="what an air frame is to the chain: one frame; several, which a step that cuts "
+                                       "finds; or a piece of a stream that goes on in the next datagram")] = "frame"
+    stream_by: Annotated[tuple[str, ...], BeforeValidator(_tuple),
+                         Key(description="wrapper fields and carrier addresses that tell streams apart; default: "
+                                         "both addresses")] = ()
+    soft_bits: Annotated[Literal["", "signed-8", "signed-4"],
+                         Key(description="air frames hold a confidence for each bit: a signed byte, or two in a "
+                                         "byte, the first in the upper half")] = ""
+    soft_one: Annotated[Literal["negative", "positive"],
+                        Key(description="sign of a soft value that stands for 1")] = "negative"
     forwards: Annotated[Literal["all", "good", "unknown"],
                         Key(description="does the gateway pass on frames whose check failed?")] = "unknown"
+
+
+    @property
+    def bits_per_byte(self) -> int:
+        """Bits on the air that a byte of an air frame holds."""
+        return {"": 8, "signed-8": 1, "signed-4": 2}[self.soft_bits]
 
 
 class Field(Strict):

@@ -72,6 +72,7 @@ EXAMPLES = [
     ("pad", {"bits": 5, "value": 0b10110}, 11, {}),
     ("pad", {"bits": 5, "at": "start", "ignored": True}, 11, {}),
     ("pad", {"to": 8}, 16, {}),
+    ("pad", {"to": 8, "unit": 12, "pattern": "0b01"}, 36, {}),
 ]
 FRAMES = 5
 
