@@ -15,7 +15,7 @@ from pcaptool.audit.executor import beside
 from pcaptool.audit.merge import Chunk
 from pcaptool.audit.piece import field_columns, integer_type, is_message_field
 from pcaptool.coding.chain import REASONS
-from pcaptool.frames.decode import KIND
+from pcaptool.frames.make import KIND
 from pcaptool.frames.table import ARRIVALS, CORRECTED, CORRUPTED, ERRORS, FRAMES, NO_COUNTER, STATES
 from pcaptool.profile import Field, Profile, WrapperField
 from pcaptool.table import Column

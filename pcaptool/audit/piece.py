@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from pcaptool.audit.arrow import arrow_array
 from pcaptool.capture import Account, Datagrams, OpenFragment, Piece, join_fragments, read_datagrams
-from pcaptool.frames.decode import KIND, FrameDecoder
+from pcaptool.frames.decode import FrameDecoder
+from pcaptool.frames.make import KIND
 from pcaptool.frames.table import CORRUPTED, NO_KEY, FrameBatch
 from pcaptool.links.numbering import Numbering
 from pcaptool.profile import Profile
@@ -139,14 +140,14 @@ class _PartWriter:
             writer.write_batch(batch)
         self.part.frames += len(frames)
         self.part.least_order.append(int(frames.order.min()))
-        if self._decoder.link.needs_message:
+        if self._decoder.maker.link.needs_message:
             self._keys.number(frames.key[(frames.state < CORRUPTED) & (frames.key != NO_KEY)])
 
     def close(self) -> None:
         for closing in (*self._writers, *self._sinks):
             closing.close()
         self.part.usable_keys = np.array(self._keys.keys, np.uint64)
-        self.part.hashed = dict(self._decoder.link.seen)
+        self.part.hashed = dict(self._decoder.maker.link.seen)
 
 
 def field_columns(profile: Profile) -> list[tuple[str, np.dtype[np.signedinteger]]]:
@@ -176,8 +177,8 @@ def to_arrow(frames: FrameBatch, decoder: FrameDecoder) -> pa.RecordBatch:
 
     Behind each message field stands ``present:NAME``.
     """
-    unused: tuple[str, ...] = () if decoder.link.needs_message else ("home",)
-    unused += () if decoder.backhaul else ("backhaul", "backhaul_key")
+    unused: tuple[str, ...] = () if decoder.maker.link.needs_message else ("home",)
+    unused += () if decoder.maker.backhaul else ("backhaul", "backhaul_key")
     arrays, names = [], [name for name in PLAIN if name not in unused]
     for name in list(names):
         arrays.append(arrow_array(getattr(frames, name)))

@@ -11,26 +11,16 @@ from numpy.typing import NDArray
 
 from pcaptool.capture import udp_checksum_ok
 from pcaptool.capture.datagrams import Datagrams
-from pcaptool.coding.chain import BAD_FIELD, Outcome
+from pcaptool.coding.chain import Outcome
 from pcaptool.coding.proof import Proof, compile_proof, linear_from
-from pcaptool.coding.step import OK, SHORT
+from pcaptool.coding.step import SHORT
 from pcaptool.frames.cut import Cutter, air_bits
 from pcaptool.frames.digest import digest
-from pcaptool.frames.fields import Layout, value_of
-from pcaptool.frames.keys import KeyMaker
-from pcaptool.frames.table import (
-    CORRECTED,
-    CORRUPTED,
-    INTACT,
-    NO_COUNTER,
-    NO_KEY,
-    STATE_SHORT,
-    FrameBatch,
-)
+from pcaptool.frames.make import Messages, Origin, TableMaker
+from pcaptool.frames.table import FrameBatch
 from pcaptool.frames.wrapper import AirFrames, Unwrapper
 from pcaptool.profile import Profile
 
-KIND = "kind of message"       # column of the message kind, by its position in the profile
 WORTH_A_PROOF = 2000            # frames of one length before its proof is compiled
 TABLE_BYTES = 96 << 20          # memory that the proofs of one profile may take
 DECODE_ROWS = 8192              # frames decoded at a time
@@ -43,9 +33,8 @@ class FrameDecoder:
         self.profile = profile
         self.chain = profile.chain
         self.unwrapper = Unwrapper(profile)
-        self.layout = Layout(profile)
-        self.link = KeyMaker(profile, profile.link.by)
-        self.backhaul = KeyMaker(profile, profile.backhaul.by) if profile.backhaul else None
+        self.maker = TableMaker(profile)
+        self.layout = self.maker.layout
         self.cutter = Cutter(self.chain) if profile.wrapper.carries == "frames" else None
         self._inner = linear_from(self.chain)
         self._proofs: dict[tuple[int, ...], Proof | None] = {}
@@ -67,7 +56,7 @@ class FrameDecoder:
 
     def _frames(self, d: Datagrams, rows: NDArray[np.int64], air: AirFrames) -> FrameBatch:
         n = len(air.row)
-        message = _Messages(n, self.layout)
+        message = Messages(n, self.layout)
         enough = air.held >= air.sent
         message.reason[~enough | (air.held == 0)] = SHORT
         if self.cutter:
@@ -85,7 +74,7 @@ class FrameDecoder:
         w = self.profile.wrapper
         return air_bits(d.buffer, start, n_bytes, w.soft_bits, w.soft_one)
 
-    def _cut(self, d: Datagrams, air: AirFrames, whole: NDArray[np.int64]) -> tuple[AirFrames, "_Messages"]:
+    def _cut(self, d: Datagrams, air: AirFrames, whole: NDArray[np.int64]) -> tuple[AirFrames, Messages]:
         """Return the frames in air frames that hold several; an air frame without any is one that is short."""
         assert self.cutter
         cuts: list[tuple[NDArray[np.int64], Outcome]] = []
@@ -110,7 +99,7 @@ class FrameDecoder:
         order = np.lexsort((begin, source))
         place = np.empty_like(order)
         place[order] = np.arange(len(order))
-        message = _Messages(len(order), self.layout)
+        message = Messages(len(order), self.layout)
         message.reason[:] = SHORT
         for rows, outcome in cuts:
             message.fill(place[rows], outcome)
@@ -121,7 +110,7 @@ class FrameDecoder:
         return frames, message
 
     def _decode_group(self, d: Datagrams, air: AirFrames, members: NDArray[np.int64], key: tuple[int, ...],
-                      message: "_Messages") -> None:
+                      message: Messages) -> None:
         """Decode frames of one length and context."""
         proof = self._proof(key, len(members))
         if proof is not None:
@@ -171,132 +160,16 @@ class FrameDecoder:
             self._table_bytes += proof.nbytes if proof else 0
         return self._proofs[key]
 
-    def _table(self, d: Datagrams, rows: NDArray[np.int64], air: AirFrames, message: "_Messages") -> FrameBatch:
-        n = len(air.row)
-        fields = {f"wrapper.{name}": values for name, values in air.fields.items()}
-        carrier = {"carrier.source": d.source, "carrier.destination": d.destination}
-        present: dict[str, NDArray[np.bool_]] = {}
-        bad = np.zeros(n, np.bool_)
-        values, kind_of = self._message_fields(message, present, bad)
-        fields |= values
-        if kind_of is not None:
-            fields[KIND] = kind_of
-        message.reason[(message.reason == OK) & bad] = BAD_FIELD
-        usable = message.reason == OK
-        wrong = np.where(usable, message.wrong_bits, -1).astype(np.int32)
-        state = np.where(usable, np.where(wrong > 0, CORRECTED, INTACT), CORRUPTED).astype(np.uint8)
-        state[message.reason == SHORT] = STATE_SHORT
-        message.headroom[~usable] = np.nan
-        columns = dict(fields)
-        for reference, address in carrier.items():
-            if any(reference == p.reference for m in (self.link, self.backhaul) if m for p in m.parts):
-                at = address[air.row]
-                columns[reference] = (at[:, 1] ^ (at[:, 0] * np.uint64(0x9E3779B97F4A7C15))).astype(np.int64)
-        key = self.link.make(columns, n)
-        for part in self.link.parts:
-            if part.reference in present:
-                key[~present[part.reference]] = NO_KEY
-        if self.link.needs_message:
-            key[message.reason == SHORT] = NO_KEY
-        home = self.link.make(columns, n, message=False) if self.link.needs_message else key
-        counter = np.full(n, NO_COUNTER, np.int64)
-        if self.profile.counter:
-            name = self.profile.counter.field
-            there = usable & present.get(name, True)
-            counter = np.where(there, columns[name], NO_COUNTER)
-        backhaul = np.full(n, NO_COUNTER, np.int64)
-        backhaul_key = np.zeros(n, np.uint64)
-        if self.backhaul and self.profile.backhaul:
-            backhaul = columns[self.profile.backhaul.counter]
-            backhaul_key = self.backhaul.make(columns, n)
+    def _table(self, d: Datagrams, rows: NDArray[np.int64], air: AirFrames, message: Messages) -> FrameBatch:
         hashes = digest(d.buffer, d.start, d.held, d.source, d.destination, d.source_port, d.destination_port,
                         d.ident, rows)
         if len(air.row) != len(rows) or self.unwrapper.many or self.cutter:
             hashes = hashes[np.searchsorted(rows, air.row)]
-        keep = usable[message.error_frame]
-        return FrameBatch(
-            d.packet[air.row], d.time[air.row], d.order[air.row], air.slot.astype(np.int16),
-            np.where(air.slot == 0, d.records[air.row], 0).astype(np.int32), hashes, state,
-            message.reason, wrong, message.headroom, air.bits.astype(np.int32), counter, key,
-            home, backhaul, backhaul_key, fields, present,
-            message.error_frame[keep], message.error_position[keep],
-            int((udp_checksum_ok(d, rows) == 0).sum()),
-        )
-
-    def _message_fields(
-        self, message: "_Messages", present: dict[str, NDArray[np.bool_]], bad: NDArray[np.bool_]
-    ) -> tuple[dict[str, NDArray[np.int64]], NDArray[np.int64] | None]:
-        """Return (raw values by name, message kind or None); note absent fields and bad fixed values."""
-        short = message.length < max((p.last for p in self.layout.places), default=-1) + 1
-        any_short = bool(short.any())
-        values: dict[str, NDArray[np.int64]] = {}
-        kind_of = None
-        kinds = self.profile.message.kind
-        common = [p for p in self.layout.places if p.kind < 0]
-        for place in common:
-            values[place.field.name] = value_of(message.words, place)
-            if any_short:
-                present[place.field.name] = message.length > place.last
-        if kinds:
-            kind_of = np.full(len(message.length), -1, np.int64)
-            for index, kind in enumerate(kinds):
-                fits = np.ones(len(kind_of), np.bool_)
-                for name, value in kind.when.items():
-                    fits &= values[name] == value
-                kind_of[fits & (kind_of < 0)] = index
-        for name, places in self.layout.by_name.items():
-            if places[0].kind < 0:
-                continue
-            column = np.zeros(len(message.length), np.int64)
-            there = np.zeros(len(message.length), np.bool_)
-            for place in places:
-                mine = (kind_of == place.kind) & (message.length > place.last)
-                column = np.where(mine, value_of(message.words, place), column)
-                there |= mine
-            values[name], present[name] = column, there
-        for place in self.layout.places:
-            if place.field.must_be is not None:
-                mine = message.length > place.last
-                if place.kind >= 0:
-                    mine &= kind_of == place.kind
-                bad |= mine & (value_of(message.words, place) != place.field.must_be)
-        return values, kind_of
-
-
-class _Messages:
-    """Decoded messages of a batch, filled group by group."""
-
-    def __init__(self, n: int, layout: Layout) -> None:
-        self.layout = layout
-        self.words = np.zeros((n, max(layout.words, 1)), np.uint64)
-        self.length = np.zeros(n, np.int64)
-        self.reason = np.zeros(n, np.uint8)
-        self.wrong_bits = np.full(n, -1, np.int32)
-        self.headroom = np.full(n, np.nan, np.float32)
-        self.error_frame = np.zeros(0, np.int64)
-        self.error_position = np.zeros(0, np.int32)
-
-    def prove(self, rows: NDArray[np.int64], words: NDArray[np.uint64], length: int, corrects: bool) -> None:
-        whole = len(rows) == len(self.length)
-        at = slice(None) if whole else rows
-        self.words[at, : words.shape[1]] = words
-        self.length[at] = length
-        self.wrong_bits[at] = 0
-        if corrects:
-            self.headroom[at] = 1
-
-    def fill(self, rows: NDArray[np.int64], outcome: Outcome) -> None:
-        if self.layout.words:
-            self.words[rows] = self.layout.gather(outcome.message)
-        self.length[rows] = outcome.length
-        self.reason[rows] = outcome.reason
-        self.wrong_bits[rows] = outcome.wrong_bits
-        self.headroom[rows] = outcome.headroom
-        if len(outcome.error_frame):
-            frame = np.concatenate([self.error_frame, rows[outcome.error_frame]])
-            position = np.concatenate([self.error_position, outcome.error_position])
-            order = np.argsort(frame, kind="stable")
-            self.error_frame, self.error_position = frame[order], position[order]
+        origin = Origin(d.packet[air.row], d.time[air.row], d.order[air.row], air.slot.astype(np.int16),
+                        np.where(air.slot == 0, d.records[air.row], 0).astype(np.int32), hashes)
+        fields = {f"wrapper.{name}": values for name, values in air.fields.items()}
+        return self.maker.make(origin, fields, self.maker.carriers(d, air.row), air.bits, message,
+                               int((udp_checksum_ok(d, rows) == 0).sum()))
 
 
 def _group(
