@@ -39,7 +39,11 @@ def arrow_strings(words: Sequence[str]) -> pa.Array:
 
 
 def numpy_column(array: pa.Array) -> NDArray[Any]:
-    """Return an arrow array without missing values as numpy; truth values are unpacked, others shared."""
+    """Return an arrow array without missing values as numpy; truth values are unpacked, octets are objects."""
+    if pa.types.is_binary(array.type):
+        out = np.empty(len(array), object)
+        out[:] = array.to_pylist()
+        return out
     data = array.buffers()[1]
     if pa.types.is_boolean(array.type):
         bits = np.unpackbits(np.frombuffer(data, np.uint8), bitorder="little")

@@ -99,6 +99,13 @@ class _Stream:
         return Chunk(columns, numpy_column(errors.column(0)), numpy_column(errors.column(1)))
 
 
+def chunk_of(batch: pa.RecordBatch, capture: NDArray[np.int32], error_frame: NDArray[np.int64],
+             error_position: NDArray[np.int32]) -> Chunk:
+    """Return frames that come from no file, in canonical order already."""
+    columns: Columns = {n: numpy_column(v) for n, v in zip(batch.schema.names, batch.columns, strict=True)}
+    return Chunk(columns | {"capture": capture}, error_frame, error_position)
+
+
 class Supply(Protocol):
     """Where sources come from: those taken over already, and those still pending."""
 

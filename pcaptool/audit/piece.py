@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from pcaptool.audit.arrow import arrow_array
 from pcaptool.capture import Account, Datagrams, OpenFragment, Piece, join_fragments, read_datagrams
 from pcaptool.frames.decode import FrameDecoder
-from pcaptool.frames.make import KIND
+from pcaptool.frames.make import KIND, TableMaker
 from pcaptool.frames.table import CORRUPTED, NO_KEY, FrameBatch
 from pcaptool.links.numbering import Numbering
 from pcaptool.profile import Profile
@@ -130,7 +130,7 @@ class _PartWriter:
     def add(self, frames: FrameBatch) -> None:
         if not len(frames):
             return
-        batches = (to_arrow(frames, self._decoder), pa.record_batch(
+        batches = (to_arrow(frames, self._decoder.profile, self._decoder.maker), pa.record_batch(
             [arrow_array(frames.error_frame), arrow_array(frames.error_position)], ["frame", "position"]))
         if not self._writers:
             for path, batch in zip((self.part.path, self.part.errors_path), batches, strict=True):
@@ -140,7 +140,7 @@ class _PartWriter:
             writer.write_batch(batch)
         self.part.frames += len(frames)
         self.part.least_order.append(int(frames.order.min()))
-        if self._decoder.maker.link.needs_message:
+        if self._decoder.maker.link.needs_message and frames.air is None:
             self._keys.number(frames.key[(frames.state < CORRUPTED) & (frames.key != NO_KEY)])
 
     def close(self) -> None:
@@ -172,17 +172,24 @@ def integer_type(bits: int) -> np.dtype[np.signedinteger]:
     return np.dtype(np.int16 if bits < 16 else np.int32 if bits < 32 else np.int64)
 
 
-def to_arrow(frames: FrameBatch, decoder: FrameDecoder) -> pa.RecordBatch:
+def to_arrow(frames: FrameBatch, profile: Profile, maker: TableMaker) -> pa.RecordBatch:
     """Return a batch as arrow columns: PLAIN but what the profile has no use for, then the fields.
 
     Behind each message field stands ``present:NAME``.
     """
-    unused: tuple[str, ...] = () if decoder.maker.link.needs_message else ("home",)
-    unused += () if decoder.maker.backhaul else ("backhaul", "backhaul_key")
+    unused: tuple[str, ...] = () if maker.link.needs_message else ("home",)
+    unused += () if maker.backhaul else ("backhaul", "backhaul_key")
     arrays, names = [], [name for name in PLAIN if name not in unused]
     for name in list(names):
         arrays.append(arrow_array(getattr(frames, name)))
-    for name, kind in field_columns(decoder.profile):
+    if frames.air is not None:          # pieces of a stream: payload, and what frames are told by later
+        arrays.append(pa.array(frames.air, pa.binary()))
+        names.append("air")
+        for name, values in frames.fields.items():
+            arrays.append(arrow_array(values))
+            names.append(name)
+        return pa.record_batch(arrays, names)
+    for name, kind in field_columns(profile):
         arrays.append(arrow_array(frames.fields[name].astype(kind)))
         names.append(name)
         if is_message_field(name):

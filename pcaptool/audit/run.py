@@ -13,12 +13,14 @@ from pcaptool.audit.accounts import CaptureAccount, check_identity, total_ledger
 from pcaptool.audit.executor import beside, processes
 from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
-from pcaptool.audit.merge import LAST, Chunk, merge
+from pcaptool.audit.merge import LAST, Chunk, chunk_of, merge
 from pcaptool.audit.naming import short_names
-from pcaptool.audit.piece import Job, decode_piece
+from pcaptool.audit.piece import Job, decode_piece, to_arrow
 from pcaptool.audit.pieces import Pieces
 from pcaptool.capture import sha256, survey
 from pcaptool.capture.survey import PIECE_BYTES
+from pcaptool.frames.stream import StreamDecoder
+from pcaptool.frames.table import FrameBatch
 from pcaptool.links.follow import FrameSlice, LinkFollower
 from pcaptool.links.numbering import Numbering
 from pcaptool.links.rows import gap_rows, interval_rows, link_rows
@@ -103,6 +105,7 @@ class _Run:
         many = large and options.jobs > 1
         self.executor: Executor | None = options.executor or (processes(options.jobs - 1) if many else None)
         self.captures: list[CaptureAccount] = []
+        self.notes: list[str] = []
         self.hashing = beside(options.jobs)
         digests = {path: self.hashing.submit(sha256, path) for path in paths}
         for path in paths:
@@ -138,7 +141,10 @@ class _Run:
         outside = 0
         for index in range(len(self.profiles)):
             known: Numbering | None = None
-            if follower.makers[index].needs_message:        # a damaged key is judged by all that were usable
+            stream = StreamDecoder(self.profiles[index]) if self.profiles[index].wrapper.carries == "stream" else None
+            if stream:
+                known = Numbering() if follower.makers[index].needs_message else None
+            elif follower.makers[index].needs_message:      # a damaged key is judged by all that were usable
                 known = Numbering()
                 while self.pieces.bound != LAST:
                     self.pieces.take_over()
@@ -148,20 +154,43 @@ class _Run:
             for chunk in merge(index, self.pieces):
                 for source in self.pieces.sources:
                     hashed[source.part.profile] |= source.part.hashed
+                chunk = self._without_copies(index, chunk, follower)
+                if stream:
+                    follower.count_datagrams(_slice(index, chunk))
+                    made = stream.add(chunk.columns)
+                    hashed[index] |= stream.maker.link.seen
+                    if made is None:
+                        continue
+                    chunk = self._frames_of(stream, *made)
                 outside += self._follow(index, chunk, follower, known, table, hashed)
+            if stream:
+                made = stream.rest()
+                hashed[index] |= stream.maker.link.seen
+                if made is not None:
+                    outside += self._follow(index, self._frames_of(stream, *made), follower, known, table, hashed)
+                if stream.breaks:
+                    self.notes.append(f"profile {self.profiles[index].name}: missing datagrams broke streams "
+                                      f"{stream.breaks} times; what stood across a break is lost")
         while self.pieces.bound != LAST:                    # of captures in which no profile found a frame
             self.pieces.take_over()
         table.close()
         return self._report(follower, hashed, table, folder, outside)
 
-    def _follow(self, profile: int, chunk: Chunk, follower: LinkFollower, known: Numbering | None,
-                table: FrameTable, hashed: list[dict[int, tuple[int, ...]]]) -> int:
+    def _frames_of(self, stream: StreamDecoder, frames: FrameBatch, capture: NDArray[np.int32]) -> Chunk:
+        return chunk_of(to_arrow(frames, stream.profile, stream.maker), capture, frames.error_frame,
+                        frames.error_position)
+
+    def _without_copies(self, profile: int, chunk: Chunk, follower: LinkFollower) -> Chunk:
         copies = follower.copies(_slice(profile, chunk))
         if copies.any():
             which, records = chunk.columns["capture"][copies], chunk.columns["records"][copies]
             for index in np.unique(which):
                 self.captures[int(index)].copied(int(records[which == index].sum()))
             chunk = chunk.take(np.flatnonzero(~copies))
+        return chunk
+
+    def _follow(self, profile: int, chunk: Chunk, follower: LinkFollower, known: Numbering | None,
+                table: FrameTable, hashed: list[dict[int, tuple[int, ...]]]) -> int:
         outside = 0
         if self.options.begin is not None or self.options.end is not None:
             time = chunk.columns["time"]
@@ -207,7 +236,7 @@ class _Run:
         for capture in self.captures:
             check_identity(capture)
         ledger = total_ledger(self.captures)
-        notes = [note for c in self.captures for note in c.notes()]
+        notes = [note for c in self.captures for note in c.notes()] + self.notes
         if outside:
             notes.append(f"{outside} frames lie outside the time asked for; they are in the ledger, not in the tables")
         for profile in self.profiles:

@@ -140,6 +140,10 @@ class Convolutional(Step):
         return False            # affine, but not worth a proof: what it is used on hardly comes undamaged
 
     @property
+    def period(self) -> int:
+        return sum(row.count("1") for row in self._pattern)
+
+    @property
     def _taps(self) -> tuple[int, ...]:
         return tuple(octal(g) for g in self.generators)
 

@@ -71,6 +71,10 @@ class LineCode(Step):
         return self.kind != "three_of_six"
 
     @property
+    def period(self) -> int:
+        return self._ratio[1]
+
+    @property
     def _changes(self) -> int:
         """The bit that changes the level."""
         return 1 if self.kind == "differential" else self.toggle_on

@@ -87,6 +87,7 @@ class Step(ABC):
             frame: says where a frame begins or ends
     linear  ``encode`` is affine over GF(2) for a given data length and context, and ``strip`` is too
     needs   wrapper fields whose values ``encode`` and ``decode`` look up in their context
+    period  bits on the air after which the step repeats; a stream may begin anywhere between
     cuts    ``find`` cuts long rows, which hold several words or a piece of a stream, into words
     """
 
@@ -97,6 +98,10 @@ class Step(ABC):
     @property
     def linear(self) -> bool:
         return True
+
+    @property
+    def period(self) -> int:
+        return 1
 
     @property
     def cuts(self) -> bool:

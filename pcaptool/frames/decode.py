@@ -17,7 +17,7 @@ from pcaptool.coding.step import SHORT
 from pcaptool.frames.cut import Cutter, air_bits
 from pcaptool.frames.digest import digest
 from pcaptool.frames.make import Messages, Origin, TableMaker
-from pcaptool.frames.table import FrameBatch
+from pcaptool.frames.table import NO_COUNTER, FrameBatch
 from pcaptool.frames.wrapper import AirFrames, Unwrapper
 from pcaptool.profile import Profile
 
@@ -52,7 +52,21 @@ class FrameDecoder:
         rows, air = self.unwrapper.take_apart(d, rows)
         taken[rows] = True
         taken[cut] = True
-        return self._frames(d, rows, air), int(d.records[cut].sum())
+        make = self._pieces if self.profile.wrapper.carries == "stream" else self._frames
+        return make(d, rows, air), int(d.records[cut].sum())
+
+    def _pieces(self, d: Datagrams, rows: NDArray[np.int64], air: AirFrames) -> FrameBatch:
+        """Return pieces of streams as rows; StreamDecoder makes frames of them, in canonical order."""
+        message = Messages(len(air.row), self.layout)
+        message.length[:] = np.iinfo(np.int64).max
+        message.reason[air.held < air.sent] = SHORT
+        batch = self._table(d, rows, air, message)
+        batch.counter[:] = NO_COUNTER
+        batch.fields = {n: v for n, v in batch.fields.items() if n.startswith("wrapper.")}
+        batch.fields |= self.maker.carriers(d, air.row)
+        batch.present = {}
+        batch.air = [bytes(d.buffer[a : a + n]) for a, n in zip(air.start.tolist(), air.held.tolist(), strict=True)]
+        return batch
 
     def _frames(self, d: Datagrams, rows: NDArray[np.int64], air: AirFrames) -> FrameBatch:
         n = len(air.row)

@@ -56,6 +56,7 @@ class FrameBatch:
     fields    name -> int64 (frame,)  raw values; "wrapper.NAME" and message names
     present   name -> bool (frame,)   where a message field exists; absent: in every usable frame
     error_frame  int64 (error,) row in this batch; error_position int32 (error,)
+    air       pieces of a stream, one bytes object a row, or None where rows are frames
     checksum_bad int        datagrams whose UDP checksum does not hold
     """
 
@@ -80,6 +81,7 @@ class FrameBatch:
     error_frame: NDArray[np.int64]
     error_position: NDArray[np.int32]
     checksum_bad: int = 0
+    air: list[bytes] | None = None
 
     def __len__(self) -> int:
         return len(self.packet)

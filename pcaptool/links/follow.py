@@ -132,7 +132,10 @@ class LinkFollower:
             self.links.group[who[sure]] = group[sure]
         arrival = self.links.follow(who, f, counter, f.state, group)
         if profile.backhaul:
-            self._backhaul(f, who)
+            gateway = self._gateway(f)
+            if profile.wrapper.carries != "stream":
+                self._count(f, gateway)
+            self._heard_by(who, gateway)
         self.bins.add(who, f.state, f.headroom, f.time, len(self.links))
         return who, arrival
 
@@ -165,13 +168,22 @@ class LinkFollower:
             counted.grow(first + new, modulo, window, interval, verifies)
         return row_of[profile][numbers]
 
-    def _backhaul(self, f: FrameSlice, who: NDArray[np.int64]) -> None:
+    def count_datagrams(self, f: FrameSlice) -> None:
+        """Follow the gateways' own counters through datagrams that are pieces of streams."""
+        if self.profiles[f.profile].backhaul:
+            self._count(f, self._gateway(f))
+
+    def _gateway(self, f: FrameSlice) -> NDArray[np.int64]:
+        """Return the row of every frame's gateway."""
         backhaul = self.profiles[f.profile].backhaul
         assert backhaul is not None
-        gateway = self._rows(f.profile, f.backhaul_key, self.gateway_numbering, self.gateway_of, self.gateways,
-                             backhaul.modulo, 16, 0, True)
-        self.gateways.follow(np.where(f.slot == 0, gateway, -1), f, f.backhaul,
-                             np.zeros(len(gateway), np.uint8))
+        return self._rows(f.profile, f.backhaul_key, self.gateway_numbering, self.gateway_of, self.gateways,
+                          backhaul.modulo, 16, 0, True)
+
+    def _count(self, f: FrameSlice, gateway: NDArray[np.int64]) -> None:
+        self.gateways.follow(np.where(f.slot == 0, gateway, -1), f, f.backhaul, np.zeros(len(gateway), np.uint8))
+
+    def _heard_by(self, who: NDArray[np.int64], gateway: NDArray[np.int64]) -> None:
         if len(self.link_gateway) < len(self.links):
             fresh = np.full(len(self.links), -1, np.int64)
             fresh[: len(self.link_gateway)] = self.link_gateway

@@ -5,8 +5,10 @@ and backhaul losses of one gateway that overlap in time form a cluster. With M f
 cluster's gaps and B datagrams missing on the backhaul, a gap of m frames lost at least
 max(0, B - (M - m)) and at most min(m, B) of them on the backhaul; where the bounds meet, the answer
 is decided, and what lies between them is undecided. When B reaches M, all are explained by the
-backhaul. Without a backhaul counter nothing can be told, and where the capture itself dropped
-packets, or may have, a backhaul loss may be the capture's own.
+backhaul. Where a datagram may hold several frames, or a piece of a stream, a missing one may have
+taken any number with it: then the gaps of the cluster stay undecided. Without a backhaul counter
+nothing can be told, and where the capture itself dropped packets, or may have, a backhaul loss may
+be the capture's own.
 """
 
 from dataclasses import dataclass
@@ -38,13 +40,14 @@ def clusters(begin: NDArray[np.int64], end: NDArray[np.int64]) -> NDArray[np.int
 def split_losses(
     gateway: NDArray[np.int64], begin: NDArray[np.int64], end: NDArray[np.int64], lost: NDArray[np.int64],
     event_gateway: NDArray[np.int64], event_begin: NDArray[np.int64], event_end: NDArray[np.int64],
-    event_lost: NDArray[np.int64], event_dropped: NDArray[np.bool_],
+    event_lost: NDArray[np.int64], event_dropped: NDArray[np.bool_], several: NDArray[np.bool_],
 ) -> Split:
     """Return the split of every gap's lost frames.
 
     gateway        int64 (gap,)  -1: its datagrams carry no backhaul counter
     begin, end     int64 (gap,)  order time of the usable frames around the gap, ns
     lost           int64 (gap,)  missing frames that no corrupted frame explains
+    several        bool (gap,)   a datagram of its gateway may hold several frames
     event_*        (event,)      losses seen in the backhaul counters; dropped: the capture dropped packets
     """
     out = Split(np.zeros_like(lost), np.zeros_like(lost), lost.copy())
@@ -61,9 +64,10 @@ def split_losses(
         missing = np.bincount(own, lost[mine], size).astype(np.int64)[own]
         backhaul = np.bincount(theirs, event_lost[events], size).astype(np.int64)[own]
         dropped = np.bincount(theirs, event_dropped[events], size)[own] > 0
-        m = lost[mine]
-        upper = np.minimum(m, backhaul)
+        m, any_number = lost[mine], several[mine] & (backhaul > 0)
+        upper = np.where(any_number, m, np.minimum(m, backhaul))
         lower = np.where(backhaul >= missing, m, np.maximum(0, backhaul - (missing - m)))
+        lower[any_number] = 0
         out.air[mine] = m - upper
         out.backhaul[mine] = np.where(dropped, 0, lower)
         out.undecided[mine] = m - out.air[mine] - out.backhaul[mine]

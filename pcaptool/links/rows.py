@@ -47,6 +47,7 @@ def gap_rows(follower: LinkFollower, names: Sequence[str], dropped: Sequence[tup
     if len(follower.link_gateway):
         known = gaps["link"] < len(follower.link_gateway)
         gateway[known] = follower.link_gateway[gaps["link"][known]]
+    several = np.array([follower.profiles[p].wrapper.several for p, _ in follower.identity], np.bool_)
     events = follower.gateways.gaps[: follower.gateways.n_gaps]
     events = events[events["missing"] > 0]
     in_drops = np.zeros(len(events), np.bool_)
@@ -54,7 +55,8 @@ def gap_rows(follower: LinkFollower, names: Sequence[str], dropped: Sequence[tup
         begin, end = events["from_order"] - events["shift"], events["to_order"] - events["shift"]
         in_drops |= (end >= first) & (begin <= last)
     split = split_losses(gateway, gaps["from_order"], gaps["to_order"], lost, events["link"], events["from_order"],
-                         events["to_order"], events["missing"], in_drops)
+                         events["to_order"], events["missing"], in_drops,
+                         several[gaps["link"]] if len(gaps) else np.zeros(0, np.bool_))
     begin, end = gaps["from_order"] - gaps["shift"], gaps["to_order"] - gaps["shift"]
     place = np.empty(len(names), np.int64)
     place[sorted(range(len(names)), key=lambda i: natural(names[i]))] = np.arange(len(names))

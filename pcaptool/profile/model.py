@@ -100,6 +100,12 @@ class Wrapper(Strict):
 
 
     @property
+    def several(self) -> bool:
+        """True when a datagram may hold more than one frame, or parts of frames."""
+        return self.carries != "frame" or bool(self.each) or self.frames not in (None, 1) or (
+            self.frames is None and isinstance(self.frame_bytes, int))
+
+    @property
     def bits_per_byte(self) -> int:
         """Bits on the air that a byte of an air frame holds."""
         return {"": 8, "signed-8": 1, "signed-4": 2}[self.soft_bits]

@@ -6,12 +6,12 @@ import pytest
 from pcaptool.links.losses import clusters, split_losses
 
 
-def split(gaps, events, dropped=False):
+def split(gaps, events, dropped=False, several=False):
     """gaps: (gateway, begin, end, lost); events: (gateway, begin, end, lost)."""
     g = np.array(gaps, np.int64).reshape(-1, 4)
     e = np.array(events, np.int64).reshape(-1, 4)
     out = split_losses(g[:, 0], g[:, 1], g[:, 2], g[:, 3], e[:, 0], e[:, 1], e[:, 2], e[:, 3],
-                       np.full(len(e), dropped))
+                       np.full(len(e), dropped), np.full(len(g), several))
     return list(zip(out.air.tolist(), out.backhaul.tolist(), out.undecided.tolist(), strict=True))
 
 
@@ -28,6 +28,10 @@ def split(gaps, events, dropped=False):
 ])
 def test_split_by_hand(gaps, events, expected, why):
     assert split(gaps, events) == expected, why
+
+
+def test_a_missing_datagram_of_several_frames_may_have_taken_any_number():
+    assert split([(0, 0, 10, 3), (0, 20, 30, 2)], [(0, 2, 4, 1)], several=True) == [(0, 0, 3), (2, 0, 0)]
 
 
 def test_drops_of_the_capture_itself_leave_backhaul_losses_undecided():
