@@ -1,10 +1,10 @@
 """Outputs of a frame arranged in blocks of look-up tables.
 
 A block gives up to 256 outputs that depend on the same bytes of the frame: for each of these bytes
-one or two look-ups whose entries hold all outputs of the block side by side. So the cost of a block
-is the number of bytes it depends on, nearly the same for 1 output as for 256, and outputs are put
+one or two look-ups, whose entries hold all outputs of the block side by side. So the cost of a block
+is the number of bytes it depends on, not much less for 1 output than for 256, and outputs are put
 together by the bytes they depend on: the check bits of one codeword in a block, those of the next
-in another.
+in another, those of a check over the whole frame in a third.
 """
 
 from dataclasses import dataclass, field
@@ -12,13 +12,14 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from pcaptool.coding.proof_kernel import AT_ONCE, LANES, NARROW, WIDE
+from pcaptool.coding.proof_kernel import AT_ONCE, LANES
 from pcaptool.coding.proof_probe import Functionals
 
 # Measured costs, in units of one byte of a wide block
-NARROW_COST = 0.7           # of a byte of a narrow block: at most 64 outputs, one look-up
+NARROW_COST = 0.65          # of a byte of a narrow block
 BLOCK_COST = 6.0            # of a block, beside its bytes
-ROWS = 64 * LANES           # outputs of a wide block
+FEW = 16                    # outputs of a narrow block: residual only
+MANY = 64 * LANES           # outputs of a wide block
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,9 +49,13 @@ class _Block:
     def lanes(self) -> int:
         return -(-len(self.residual) // 64) + len(self.words)
 
+    @property
+    def wide(self) -> bool:
+        return len(self.residual) > FEW or bool(self.words)
 
-def _cost(lanes: int, n_bytes: int) -> float:
-    return BLOCK_COST + n_bytes * (1.0 if lanes > 1 else NARROW_COST)
+    @property
+    def cost(self) -> float:
+        return BLOCK_COST + float(self.support.sum()) * (1.0 if self.wide else NARROW_COST)
 
 
 def _union(support: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -77,13 +82,13 @@ def _cut(support: NDArray[np.bool_]) -> list[_Block]:
     """
     keys = np.packbits(support, axis=1)
     order = np.array(sorted(range(len(support)), key=lambda i: keys[i].tobytes()), np.int64)
-    rate = np.where(np.arange(1, ROWS + 1) > 64, 1.0, NARROW_COST)
+    rate = np.where(np.arange(1, MANY + 1) > FEW, 1.0, NARROW_COST)
     least, taken = np.zeros(len(order) + 1), np.zeros(len(order) + 1, np.int64)
-    last = np.full(support.shape[1], -ROWS, np.int64)
+    last = np.full(support.shape[1], -MANY, np.int64)
     for i, output in enumerate(order, 1):
         last[support[output]] = i
-        back = np.minimum(i - last, ROWS)
-        n_bytes = np.cumsum(np.bincount(back, minlength=ROWS + 1)[: min(i, ROWS)])
+        back = np.minimum(i - last, MANY)
+        n_bytes = np.cumsum(np.bincount(back, minlength=MANY + 1)[: min(i, MANY)])
         cost = least[i - len(n_bytes) : i][::-1] + n_bytes * rate[: len(n_bytes)]
         best = int(np.argmin(cost))
         least[i], taken[i] = cost[best] + BLOCK_COST, best + 1
@@ -98,11 +103,10 @@ def _cut(support: NDArray[np.bool_]) -> list[_Block]:
 
 def _place(word: int, support: NDArray[np.bool_], blocks: list[_Block]) -> None:
     """Add a word of data to the block where it costs least, or to a new one."""
-    best, least = None, _cost(1, int(support.sum()))
+    best, least = None, BLOCK_COST + float(support.sum())
     for block in blocks:
         if block.lanes < LANES:
-            more = (_cost(block.lanes + 1, int((block.support | support).sum()))
-                    - _cost(block.lanes, int(block.support.sum())))
+            more = BLOCK_COST + float((block.support | support).sum()) - block.cost
             if more < least:
                 best, least = block, more
     if best is None:
@@ -120,24 +124,22 @@ def _fill(blocks: list[_Block], residual: Functionals, data: Functionals) -> Tab
     constant = np.zeros((len(blocks), LANES), np.uint64)
     word = np.full((len(blocks), LANES), -1, np.int64)
     known: dict[bytes, int] = {}
-    position = entry = 0
+    position = end = 0
     for b, block in enumerate(blocks):
         outputs = _outputs(block, residual, data)
-        wide = block.lanes > 1
         at = np.flatnonzero(block.support)
         columns = np.packbits(np.unpackbits(outputs.octets[:, at], axis=1), axis=0, bitorder="little")
-        lanes = LANES if wide else 1
-        unit = np.zeros((-(-len(at) // AT_ONCE) * AT_ONCE * 8, lanes * 8), np.uint8)
-        unit[: len(at) * 8] = columns.T[:, : lanes * 8]
+        unit = np.zeros((-(-len(at) // AT_ONCE) * AT_ONCE * 8, (MANY if block.wide else FEW) // 8), np.uint8)
+        unit[: len(at) * 8] = columns.T[:, : unit.shape[1]]
         key = unit.tobytes()
         if key not in known:
-            known[key] = entry
-            tables.append(_tables(unit.view("<u8").astype(np.uint64).reshape(-1, 8, lanes), wide))
-            entry += len(tables[-1])
+            known[key] = end
+            tables.append(_tables(unit.reshape(-1, 8, unit.shape[1]), block.wide))
+            end += len(tables[-1])
         padded = np.zeros(len(unit) // 8, np.int64)
         padded[: len(at)] = at
         positions.append(padded)
-        extent[b] = position, position + len(padded), known[key], wide
+        extent[b] = position, position + len(padded), known[key], block.wide
         position += len(padded)
         constant[b] = np.packbits(outputs.constant, bitorder="little").view("<u8")
         first = -(-len(block.residual) // 64)
@@ -148,8 +150,8 @@ def _fill(blocks: list[_Block], residual: Functionals, data: Functionals) -> Tab
 
 def _outputs(block: _Block, residual: Functionals, data: Functionals) -> Functionals:
     """Return the outputs of a block in the order of its lanes, with zeros where it has none."""
-    rows = np.zeros((ROWS, residual.rows.shape[1]), np.uint64)
-    constant = np.zeros(ROWS, np.uint8)
+    rows = np.zeros((MANY, residual.rows.shape[1]), np.uint64)
+    constant = np.zeros(MANY, np.uint8)
     parts = [(0, residual.take(block.residual))]
     first = -(-len(block.residual) // 64) * 64
     for i, word in enumerate(block.words):
@@ -160,16 +162,15 @@ def _outputs(block: _Block, residual: Functionals, data: Functionals) -> Functio
     return Functionals(rows, constant)
 
 
-def _tables(unit: NDArray[np.uint64], wide: bool) -> NDArray[np.uint64]:
-    """Return the tables of a block, one after the other: the sums of the entries of single bits.
+def _tables(unit: NDArray[np.uint8], wide: bool) -> NDArray[np.uint64]:
+    """Return the tables of a block, one after the other: every entry the sum of the entries of its single bits.
 
-    unit  uint64 (byte, bit of the byte, lane), least significant bit first
+    unit  uint8 (byte of the frame, bit of the byte, byte of the entry), least significant bit first
     """
-    n = len(unit)
     parts, values = (2, 16) if wide else (1, 256)
-    unit = unit.reshape(n, parts, 8 // parts, -1)
-    tables = np.zeros((n, parts, values, unit.shape[-1]), np.uint64)
+    single = unit.view("<u8" if wide else "<u2").astype(np.uint64 if wide else np.uint16)
+    single = single.reshape(len(unit), parts, 8 // parts, -1)
+    tables = np.zeros((len(unit), parts, values, single.shape[-1]), single.dtype)
     for k in range(8 // parts):
-        tables[:, :, 1 << k : 2 << k] = tables[:, :, : 1 << k] ^ unit[:, :, k : k + 1]
-    assert tables.size == n * (WIDE if wide else NARROW)
-    return tables.reshape(-1)
+        tables[:, :, 1 << k : 2 << k] = tables[:, :, : 1 << k] ^ single[:, :, k : k + 1]
+    return tables.reshape(-1).view(np.uint64)

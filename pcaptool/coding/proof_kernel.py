@@ -13,9 +13,10 @@ LANES = 4           # 64-bit words that an entry of a wide block holds side by s
 AT_ONCE = 4         # byte positions whose entries are added in one pass over the frames
 FRAMES = 128        # frames in flight: their sums and the tables of one pass stay in the first-level cache
 
-# Words of the tables of one byte position: a wide block looks up both halves of the byte, a narrow one all of it
-WIDE = 2 * 16 * LANES
-NARROW = 256
+# Entries of one byte position. A wide block looks up both halves of a byte, entries of LANES words; a narrow
+# one the whole byte, entries of 16 bits: the tables of either are small enough to stay near
+WIDE = 2 * 16 * LANES       # words
+NARROW = 256                # entries
 
 
 @intrinsic
@@ -79,7 +80,7 @@ def _add_narrow(
     first: NDArray[np.uint64],
     frames: int,
     positions: NDArray[np.uint64],
-    tables: NDArray[np.uint64],
+    tables: NDArray[np.uint16],
     sums: NDArray[np.uint64],
 ) -> None:
     """Add the entries of all positions to the first word of the sums of the frames."""
@@ -113,8 +114,8 @@ def prove(
 
     buffer     uint8 (byte,); a frame begins at each start
     positions  uint64 (position,)  byte positions in a frame, those of each block in a row
-    tables     uint64 (entry,)     tables of all blocks
-    extent     int64 (block, 4)    first position, end of positions, first entry, 1 wide or 0 narrow
+    tables     uint64 (entry,)     tables of all blocks, narrow ones four entries to a word
+    extent     int64 (block, 4)    first position, end of positions, first word of tables, 1 wide or 0 narrow
     constant   uint64 (block, LANES)  the sums of the zero frame
     word       int64 (block, LANES)   data word that a lane gives; -1: residual, zero when undamaged
     undamaged  bool (frame,), filled
@@ -129,14 +130,14 @@ def prove(
             row[i] = begin + i
             first[i] = start[begin + i]
         for block in range(len(extent)):
-            low, high, entry, wide = extent[block, 0], extent[block, 1], extent[block, 2], extent[block, 3]
+            low, high, table, wide = extent[block, 0], extent[block, 1], extent[block, 2], extent[block, 3]
             for i in range(alive):
                 for lane in range(LANES):
                     sums[i * LANES + lane] = constant[block, lane]
             if wide:
-                _add_wide(buffer, first, alive, positions[low:high], tables[entry:], sums)
+                _add_wide(buffer, first, alive, positions[low:high], tables[table:], sums)
             else:
-                _add_narrow(buffer, first, alive, positions[low:high], tables[entry:], sums)
+                _add_narrow(buffer, first, alive, positions[low:high], tables[table:].view(np.uint16), sums)
             kept = 0
             for i in range(alive):
                 bad = np.uint64(0)
