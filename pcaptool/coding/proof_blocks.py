@@ -24,7 +24,7 @@ MANY = 64 * LANES           # outputs of a wide block
 
 @dataclass(frozen=True, slots=True)
 class Tables:
-    """Blocks ready to be looked up; fields as the kernel wants them."""
+    """Blocks ready to be looked up; fields as ``prove`` takes them."""
 
     positions: NDArray[np.uint64]
     tables: NDArray[np.uint64]

@@ -10,7 +10,7 @@ from numba.extending import intrinsic
 from numpy.typing import NDArray
 
 LANES = 4           # 64-bit words that an entry of a wide block holds side by side
-AT_ONCE = 4         # byte positions whose entries are added in one pass over the frames
+AT_ONCE = 4         # byte positions whose entries are added in one pass over the frames, as written out below
 FRAMES = 128        # frames in flight: their sums and the tables of one pass stay in the first-level cache
 
 # Entries of one byte position. A wide block looks up both halves of a byte, entries of LANES words; a narrow

@@ -9,6 +9,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_array_equal
+from test_contract import EXAMPLES, build
 
 from pcaptool.coding import STEPS
 from pcaptool.coding.chain import Chain
@@ -188,6 +189,21 @@ def test_noise_is_not_proven(name):
     noise = np.random.default_rng(5).integers(0, 2, (40, chain.coded_bits(k)), np.uint8)
     noise[0], noise[1] = 0, 1
     assert_array_equal(run(proof_of(name), noise)[0], undamaged_by_encoding(chain, noise)[0])
+
+
+@pytest.mark.parametrize("entry", [e for e in EXAMPLES if build(e[0], e[1]).linear], ids=lambda e: e[0])
+def test_every_linear_step_is_proven(entry):
+    name, keys, k, fields = entry
+    chain = Chain((build(name, keys),))
+    chain = Chain((*chain.steps, step("pad", bits=8 - chain.coded_bits(k) % 8)))
+    rng = np.random.default_rng(11)
+    context = {field: np.full(60, values[0]) for field, values in fields.items()}
+    air = damaged(chain.encode(rng.integers(0, 2, (60, k), np.uint8), context), rng.integers(0, 4, 60), rng)
+    expected, stripped = undamaged_by_encoding(chain, air, context)
+    proof = compile_proof(chain, air.shape[1] // 8, None, {field: values[0] for field, values in fields.items()})
+    good, data = run(proof, air)
+    assert_array_equal(good, expected)
+    assert_array_equal(proof.data_bits(data[good]), stripped[expected])
 
 
 @st.composite
