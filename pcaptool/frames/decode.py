@@ -24,6 +24,7 @@ from pcaptool.profile import Profile
 WORTH_A_PROOF = 2000            # frames of one length before its proof is compiled
 TABLE_BYTES = 96 << 20          # memory that the proofs of one profile may take
 DECODE_ROWS = 8192              # frames decoded at a time
+WORTH_BYTES = 256               # longer frames: so many times WORTH_A_PROOF, as compiling takes longer
 
 
 class FrameDecoder:
@@ -165,7 +166,7 @@ class FrameDecoder:
     def _proof(self, key: tuple[int, ...], members: int) -> Proof | None:
         self._seen[key] += members
         if key not in self._proofs:
-            if self._seen[key] < WORTH_A_PROOF or self._table_bytes >= TABLE_BYTES:
+            if self._seen[key] < WORTH_A_PROOF * max(1, key[0] // WORTH_BYTES) or self._table_bytes >= TABLE_BYTES:
                 return None
             wanted = self.layout.wanted if self._inner == 0 else None
             context = dict(zip(self.chain.needs, key[1:], strict=True))
