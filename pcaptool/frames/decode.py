@@ -40,7 +40,8 @@ class FrameDecoder:
         self._inner = linear_from(self.chain)
         self._proofs: dict[tuple[int, ...], Proof | None] = {}
         self._seen: dict[tuple[int, ...], int] = defaultdict(int)
-        hard = proofs and not profile.wrapper.soft_bits
+        checked = any(step.role in ("check", "code") for step in self.chain.steps[self._inner :])
+        hard = proofs and checked and not profile.wrapper.soft_bits     # else there is nothing to prove
         self._table_bytes = 0 if hard else TABLE_BYTES
 
     def decode(self, d: Datagrams, taken: NDArray[np.bool_]) -> tuple[FrameBatch, int]:

@@ -1,5 +1,6 @@
 """report.html: the whole audit on one page that needs no network and no script."""
 
+import os
 from collections.abc import Mapping, Sequence
 from functools import cache
 from pathlib import Path
@@ -21,10 +22,12 @@ MOST_GAPS = 20          # longest gaps shown
 @cache
 def template() -> "Template":
     """Return the compiled template."""
-    from jinja2 import Environment, PackageLoader, StrictUndefined
+    from jinja2 import Environment, FileSystemBytecodeCache, PackageLoader, StrictUndefined
 
+    folder = os.environ.get("NUMBA_CACHE_DIR")      # where the command line keeps what is compiled
+    cache = FileSystemBytecodeCache(folder) if folder and os.access(folder, os.W_OK) else None
     environment = Environment(loader=PackageLoader("pcaptool.report"), autoescape=True, trim_blocks=True,
-                              lstrip_blocks=True, undefined=StrictUndefined)
+                              lstrip_blocks=True, undefined=StrictUndefined, bytecode_cache=cache)
     environment.filters |= {"count": count, "rate": rate, "when": when}
     return environment.get_template("report.html.j2")
 
