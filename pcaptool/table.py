@@ -19,12 +19,14 @@ class Column(NamedTuple):
     dtype  a pyarrow type name (``int64``, ``string``, ``bool``, ``double`` ...), ``timestamp`` (ns since
            1970, UTC), or ``label``: a dictionary-encoded string of few distinct values
     unit   empty for a count or a name
+    always there is a value in every row
     """
 
     name: str
     dtype: str
     unit: str
     meaning: str
+    always: bool = False
 
 
 # First characters by which a spreadsheet takes text for a formula, ASCII and full-width.

@@ -109,8 +109,8 @@ class FrameTable:
     def __init__(self, folder: Path | None, profiles: Sequence[Profile], captures: Sequence[str],
                  jobs: int) -> None:
         self.columns = columns_of(profiles)
-        self.schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in self.columns])
-        self.errors_schema = pa.schema([pa.field(c.name, arrow_type(c)) for c in ERRORS])
+        self.schema = pa.schema([pa.field(c.name, arrow_type(c), not c.always) for c in self.columns])
+        self.errors_schema = pa.schema([pa.field(c.name, arrow_type(c), not c.always) for c in ERRORS])
         self.profiles, self.captures = profiles, list(captures)
         self.rows = 0
         self._thread = beside(jobs)

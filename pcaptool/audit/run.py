@@ -2,7 +2,7 @@
 
 import tempfile
 from collections.abc import Callable, Sequence
-from concurrent.futures import Executor
+from concurrent.futures import Executor, Future
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -15,9 +15,9 @@ from pcaptool.audit.frame_table import FrameTable
 from pcaptool.audit.judge import judge
 from pcaptool.audit.merge import LAST, Chunk, chunk_of, merge
 from pcaptool.audit.naming import short_names
-from pcaptool.audit.piece import Job, decode_piece, to_arrow
+from pcaptool.audit.piece import Job, PieceResult, decode_piece, to_arrow
 from pcaptool.audit.pieces import Pieces
-from pcaptool.capture import sha256, survey
+from pcaptool.capture import Piece, sha256, survey
 from pcaptool.capture.survey import PIECE_BYTES
 from pcaptool.frames.stream import StreamDecoder
 from pcaptool.frames.table import FrameBatch
@@ -108,20 +108,25 @@ class _Run:
         self.notes: list[str] = []
         self.hashing = beside(options.jobs)
         digests = {path: self.hashing.submit(sha256, path) for path in paths}
+        begun: dict[Path, list[tuple[Job, Future[PieceResult] | None]]] = {path: [] for path in paths}
+
+        def begin(piece: Piece) -> None:
+            """Submit a piece, but leave the first to this process, which is free when all are found."""
+            mine = begun[piece.path]
+            job = Job(piece, profiles, scratch, f"{paths.index(piece.path)}-{len(mine)}")
+            leave = self.own and not mine and piece.path == paths[0]
+            mine.append((job, None if leave or not self.executor else self.executor.submit(decode_piece, job)))
+
         for path in paths:
             try:
-                found = survey(path, PIECE_BYTES if large else None)
+                found = survey(path, PIECE_BYTES if large else None, found=begin)
             except CaptureError as error:
                 self.problems += error.problems
                 continue
             self.captures.append(CaptureAccount(names[path], found, digests[path]))
         self.captures.sort(key=lambda c: c.rank_key)
-        jobs = [(index, Job(piece, profiles, scratch, f"{index}-{number}"))
-                for index, capture in enumerate(self.captures)
-                for number, piece in enumerate(capture.survey.pieces)]
-        first = 1 if self.own else 0    # this process takes the first piece while its workers begin with others
-        pending = [(index, job, self.executor.submit(decode_piece, job) if self.executor and number >= first else None)
-                   for number, (index, job) in enumerate(jobs)]
+        pending = [(index, job, future) for index, capture in enumerate(self.captures)
+                   for job, future in begun[capture.survey.path]]
         self.pieces = Pieces(self.captures, pending, profiles, scratch, self.problems, self._progress)
 
     def _progress(self, done: int, frames: int) -> None:

@@ -1,6 +1,7 @@
 """Look over a capture before it is decoded: format, first time, hash, and pieces to decode apart."""
 
 import hashlib
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -34,13 +35,15 @@ def sha256(path: Path) -> str:
         return hashlib.file_digest(file, "sha256").hexdigest()
 
 
-def survey(path: Path, piece_bytes: int | None = PIECE_BYTES, hashed: bool = False) -> Survey:
+def survey(path: Path, piece_bytes: int | None = PIECE_BYTES, hashed: bool = False,
+           found: Callable[[Piece], None] = lambda piece: None) -> Survey:
     """Survey a capture; raises CaptureError when it is none.
 
     piece_bytes  a plain pcap file is walked and cut at records about so many bytes apart, so that its
                  pieces can be decoded at once, and the least time in each is told; None: neither
     hashed       also its SHA-256, in the same pass; without it, and without pieces to cut, no more
                  than the beginning is read
+    found        told of every piece as soon as it is cut, so that its decoding can begin
     """
     digest = hashlib.sha256() if hashed else None
     account, records = Account(), Records()
@@ -61,12 +64,14 @@ def survey(path: Path, piece_bytes: int | None = PIECE_BYTES, hashed: bool = Fal
             i = int(np.searchsorted(begins, last_cut + (piece_bytes or 0)))
             least_time = _least(least_time, records.time[done:i])
             pieces.append(Piece(path, last_cut, int(begins[i]), first_packet, least_time))
+            found(pieces[-1])
             last_cut, first_packet, least_time, done = int(begins[i]), packets + i, None, i
         least_time = _least(least_time, records.time[done : block.count])
         packets += block.count
     else:
         walked = piece_bytes is not None and account.format.startswith("pcap,") and not account.compression
     pieces.append(Piece(path, last_cut, first_packet=first_packet, least_time=least_time if walked else None))
+    found(pieces[-1])
     return Survey(path, size, pieces, first_time, account.format, account.compression,
                   digest.hexdigest() if digest else "")
 

@@ -12,24 +12,24 @@ INTACT, CORRECTED, CORRUPTED, STATE_SHORT = range(4)
 ARRIVALS = ("", "in turn", "late", "repeated", "restart")
 
 FRAMES = (
-    Column("capture", "label", "", "file name of the capture, as found"),
-    Column("packet", "int64", "", "position of the packet in its capture, from 0; the last fragment's, if any"),
-    Column("slot", "int16", "", "position of the frame among the frames of its datagram, from 0"),
-    Column("time", "timestamp", "UTC", "when the packet was recorded"),
-    Column("profile", "label", "", "profile that claimed the datagram"),
-    Column("link", "label", "", "values of the profile's link key; ? where a corrupted frame cannot tell"),
+    Column("capture", "label", "", "file name of the capture, as found", True),
+    Column("packet", "int64", "", "position of the packet in its capture, from 0; the last fragment's, if any", True),
+    Column("slot", "int16", "", "position of the frame among the frames of its datagram, from 0", True),
+    Column("time", "timestamp", "UTC", "when the packet was recorded", True),
+    Column("profile", "label", "", "profile that claimed the datagram", True),
+    Column("link", "label", "", "values of the profile's link key; ? where a corrupted frame cannot tell", True),
     Column("counter", "int64", "", "the counter field; missing unless the message is usable"),
-    Column("state", "label", "", "intact | corrected | corrupted | short"),
+    Column("state", "label", "", "intact | corrected | corrupted | short", True),
     Column("arrival", "label", "", "in turn | late | repeated | restart; missing unless usable and counted"),
     Column("reason", "label", "", "why not usable: short | check_failed | uncorrectable | miscorrected | bad_field"),
     Column("verified", "bool", "", "an independent check confirms a corrected frame; missing unless corrected"),
     Column("wrong_bits", "int32", "bit", "channel errors, by encoding again; missing unless usable"),
     Column("headroom", "float", "", "1 - errors / t of the worst codeword; missing where nothing corrects"),
-    Column("air_bits", "int32", "bit", "bits received of the air frame"),
+    Column("air_bits", "int32", "bit", "bits received of the air frame", True),
 )
 ERRORS = (
-    Column("frame", "int64", "", "row of the frame table, from 0"),
-    Column("position", "int32", "bit", "wrong bit's position on the air, from 0"),
+    Column("frame", "int64", "", "row of the frame table, from 0", True),
+    Column("position", "int32", "bit", "wrong bit's position on the air, from 0", True),
 )
 
 NO_COUNTER = np.int64(-1)
