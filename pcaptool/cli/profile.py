@@ -19,9 +19,10 @@ def profile() -> None:
 @click.argument("names", nargs=-1, required=True, metavar="NAME|FILE...")
 @click.pass_context
 def check(ctx: click.Context, names: tuple[str, ...]) -> None:
-    """Check profiles: every key, and the worked examples in both directions."""
+    """Check profiles: every key, the worked examples in both directions, and how strong the chain is."""
     from pcaptool.problem import ProfileError, UsageError
     from pcaptool.profile import check_profile, load_profile
+    from pcaptool.profile.strength import describe_strength
 
     wrong = False
     for name in names:
@@ -35,6 +36,10 @@ def check(ctx: click.Context, names: tuple[str, ...]) -> None:
         if not problems:
             n = len(loaded.example)
             click.echo(f"{loaded.origin}: good; {n} worked example{'s' * (n != 1)} decoded and encoded")
+            lines, warnings = describe_strength(loaded)
+            click.echo("\n".join(lines))
+            for warning in warnings:
+                click.echo(f"{loaded.origin}: warning: {warning}", err=True)
         wrong |= bool(problems)
     ctx.exit(2 if wrong else 0)
 
@@ -46,7 +51,7 @@ def list_profiles() -> None:
 
     with told():
         for name, path in shipped_profiles().items():
-            click.echo(f"{name:<16} {load_profile(path).title}")
+            click.echo(f"{name:<28} {load_profile(path).title}")
 
 
 @profile.command(no_args_is_help=True)

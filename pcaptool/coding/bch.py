@@ -27,6 +27,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Codewords, Strength
 
 PIECE = 8192        # codewords worked on at a time
 
@@ -221,6 +222,17 @@ class Bch(Step):
         own, t = self._own, self.errors
         n = own.n + self.extended
         return sum(comb(n, i) for i in range(t + 1)) / 2.0 ** (n - own.k)
+
+    def strength(self, k: int) -> Strength:
+        own, t = self._own, self.errors
+        least = 2 * own.t + 1 + (self.extended or own.even)
+        does = f"corrects {t} of {own.n + self.extended} bits" if t else "finds errors only"
+        return Strength(f"({own.n + self.extended},{own.k}), distance at least {least}, {does}",
+                        self.accepted_share() ** (k // own.k))
+
+    def codewords(self, n: int) -> Codewords:
+        bit = np.arange(n)
+        return Codewords(bit // self.size, bit, self.errors)
 
     def coded_bits(self, k: int) -> int:
         words, rest = divmod(k, self._own.k)

@@ -2,8 +2,11 @@
 
 from abc import abstractmethod
 
+import numpy as np
+
 from pcaptool.coding.linear import LinearCode
 from pcaptool.coding.step import NO_CONTEXT, Batch, Bits, Context, Decoded, Step
+from pcaptool.coding.strength import Codewords, Strength
 
 
 class BlockStep(Step):
@@ -25,6 +28,16 @@ class BlockStep(Step):
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         return self.code.encode(data)
+
+    def strength(self, k: int) -> Strength:
+        code, words = self.code, k // self.code.k
+        distance = f", distance {code.distance}" if code.distance else ""
+        share = float((code.weights >= 0).sum() / 2.0 ** (code.n - code.k))
+        return Strength(f"({code.n},{code.k}){distance}, corrects {code.t} of {code.n} bits", share**words)
+
+    def codewords(self, n: int) -> Codewords:
+        bit = np.arange(n)
+        return Codewords(bit // self.code.n, bit, self.code.t)
 
     def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
         return self.code.strip(word), None

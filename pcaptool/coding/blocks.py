@@ -26,6 +26,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Strength
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -93,6 +94,11 @@ class BlockCheck(Step):
         if k < 0 or self.coded_bits(k) != n:
             raise LengthError(f"{self.name} makes no word of {n} bits")
         return k
+
+    def strength(self, k: int) -> Strength:
+        blocks = sum(1 for _ in self._blocks(k))
+        each = f" for each of {blocks} blocks" if self.every else ""
+        return Strength(f"{self.check_bits} check bits{each}", 2.0 ** (-self.check_bits * blocks))
 
     def _check_of(self, data: Bits) -> Bits:
         covered = data[:, self.skip : self.skip + self.cover if self.cover else None]

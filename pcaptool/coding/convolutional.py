@@ -23,6 +23,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Strength
 from pcaptool.coding.trellis import branch_outputs, free_distance
 from pcaptool.coding.viterbi_kernel import ANY, SPREAD, viterbi
 
@@ -190,6 +191,11 @@ class Convolutional(Step):
         k = steps - self._tail_bits
         self.coded_bits(k)
         return k
+
+    def strength(self, k: int) -> Strength:
+        d = self.free_distance
+        return Strength(f"K = {self.constraint_length}, free distance {d}: corrects {(d - 1) // 2} wrong bits that are "
+                        "far from others; accepts every word")
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         k = data.shape[1]

@@ -14,7 +14,10 @@ from pcaptool.coding.bits import bits_from_numbers
 from pcaptool.coding.blocks import BlockCheck
 from pcaptool.coding.crc_kernel import run, tables, to_register
 from pcaptool.coding.crc_standards import STANDARDS, CrcCode
+from pcaptool.coding.crc_strength import crc_strength
+from pcaptool.coding.field import polynomial_text
 from pcaptool.coding.step import Bits, LengthError, ParameterError
+from pcaptool.coding.strength import Strength
 
 __all__ = ["STANDARDS", "Crc", "CrcCode", "crc", "crc_bit_by_bit", "crc_of_bits"]
 
@@ -128,8 +131,8 @@ class Crc(BlockCheck):
             if value >> self.width:
                 raise ParameterError(key, found=hex(value), expected=f"at most {self.width} bits",
                                      fix="drop the top term of the polynomial, or set a larger width")
-        if not self.poly & 1:
-            raise ParameterError("poly", found=hex(self.poly), expected="a polynomial with the term 1",
+        if not self.poly:
+            raise ParameterError("poly", found="0", expected="a polynomial",
                                  fix="write it unreflected, top term dropped: 0x07 for x^8 + x^2 + x + 1")
 
     @property
@@ -145,6 +148,23 @@ class Crc(BlockCheck):
     @property
     def octets(self) -> bool:
         return self.code.refin
+
+    def strength(self, k: int) -> Strength:
+        code, plain = self.code, BlockCheck.strength(self, k)
+        longest = max((end - begin - self.skip for begin, end in self._blocks(k)), default=0)
+        covered = max(min(longest, self.cover) if self.cover else longest, 0)
+        s = crc_strength(1 << code.width | code.poly, covered + code.width)
+        of = " ".join(f"({polynomial_text(f)})" + (f"^{t}" if t > 1 else "") for f, t in s.factors)
+        finds = f"bursts up to {s.burst} bits" + (", odd numbers of wrong bits" if s.odd else "")
+        text = (f"{plain.text}; generator {of}, order {s.order}; finds {finds}; distance "
+                f"{'' if s.exact else 'at least '}{s.distance} at {s.bits} bits")
+        warning = ""
+        if s.effective < s.width:
+            warning = (f"the generator lacks its +1 term and is a CRC of {s.effective} bits; a register that shifts "
+                       "right, XORed with the constant as printed, does that: check the bit order")
+        elif s.exact and s.distance == 2:
+            warning = f"two wrong bits {s.order} apart are missed: the word of {s.bits} bits is too long for it"
+        return Strength(text, plain.accepted, plain.exact, warning)
 
     def compute(self, data: Bits) -> Bits:
         code = self.code

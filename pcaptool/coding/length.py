@@ -21,6 +21,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Strength
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -56,6 +57,10 @@ class Length(Step):
         if self.order == "little":
             value = int.from_bytes(value.to_bytes(self.bits // 8, "little"), "big")
         return bits_of(value, self.bits)
+
+    def strength(self, k: int) -> Strength:
+        fitting = min(k // self.unit + 1, max((1 << self.bits) - max(self.plus, 0), 0))
+        return Strength(f"{self.bits} bits", fitting / 2.0**self.bits, exact=self.plus >= 0)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         self.coded_bits(data.shape[1])

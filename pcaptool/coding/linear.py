@@ -122,6 +122,7 @@ class LinearCode:
     weights: NDArray[np.int8]
     t: int
     reach: int
+    distance: int | None              # least, where it is known
 
     @property
     def n(self) -> int:
@@ -225,7 +226,7 @@ def linear_code(
         codewords = (values @ generator % 2).astype(np.uint8)
     reach = 2 * t if distance is None else min(distance - 1, 2 * t + 1)
     return LinearCode(generator, codewords, right_inverse, places, columns, octets, syndromes, leaders,
-                      pattern_weights, t, reach)
+                      pattern_weights, t, reach, distance)
 
 
 def _columns(generator: NDArray[np.uint8]) -> NDArray[np.uint64]:

@@ -26,6 +26,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Codewords, Strength
 
 TRACE_EXPONENT = 117        # of the CCSDS dual basis: bit i of an element u is Tr(u alpha^(117 i))
 LARGEST_TABLE = 1 << 20     # bytes of the generator times every symbol
@@ -140,6 +141,18 @@ class ReedSolomon(Step):
         n, q = self.n - self.fill, 1 << self.m
         volume: int = sum(comb(n, i) * (q - 1) ** i for i in range(self.t + 1))
         return float(volume / q ** (self.n - self.k))
+
+    def strength(self, k: int) -> Strength:
+        data = self._sent_data(k, 0)
+        n, q, r = data + self.n - self.k, 1 << self.m, self.n - self.k
+        volume: int = sum(comb(n, i) * (q - 1) ** i for i in range(self.t + 1))
+        spread = f", {self.depth} interleaved" if self.depth > 1 else ""
+        return Strength(f"({n},{data}) over GF({q}){spread}, distance {r + 1}, corrects {self.t} of {n} symbols of "
+                        f"{self.m} bits", float(volume / q**r) ** self.depth)
+
+    def codewords(self, n: int) -> Codewords:
+        symbol = np.arange(n) // self.m
+        return Codewords(symbol % self.depth, symbol, self.t)
 
     @property
     def _own(self) -> _Tables:

@@ -1,6 +1,7 @@
 """Repetition with majority decision."""
 
 from dataclasses import dataclass
+from math import comb
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
@@ -20,6 +21,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Codewords, Strength
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -47,6 +49,16 @@ class Repeat(Step):
         if self.order == "word":
             return word.reshape(n, self.times, k)
         return word.reshape(n, k, self.times).swapaxes(1, 2)
+
+    def strength(self, k: int) -> Strength:
+        ties = 0.0 if self.times % 2 else comb(self.times, self.times // 2) / 2.0**self.times
+        return Strength(f"distance {self.times}, corrects {(self.times - 1) // 2} of {self.times} copies",
+                        (1 - ties) ** k)
+
+    def codewords(self, n: int) -> Codewords:
+        bit = np.arange(n)
+        k = n // self.times
+        return Codewords(bit % k if self.order == "word" else bit // self.times, bit, (self.times - 1) // 2)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         return np.tile(data, self.times) if self.order == "word" else np.repeat(data, self.times, axis=1)

@@ -19,6 +19,8 @@ from typing import Any, ClassVar, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from pcaptool.coding.strength import NOTHING, Codewords, Strength
+
 Bits = NDArray[np.uint8]
 
 # Faults that a step can find, by increasing precedence when several steps find one.
@@ -141,6 +143,14 @@ class Step(ABC):
         """
         raise TypeError(f"step {self.name} is not linear")
 
+
+    def strength(self, k: int) -> Strength:
+        """Return what the step can do for k data bits; raise LengthError as ``coded_bits`` does."""
+        return NOTHING
+
+    def codewords(self, n: int) -> Codewords | None:
+        """Return where the codewords lie in a word of n bits; None where the step is no block code."""
+        return None
 
     def find(self, bits: Bits, length: NDArray[np.int64]) -> tuple[
             NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:

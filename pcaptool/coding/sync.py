@@ -1,6 +1,7 @@
 """Find the sync word that stands before the data, tolerating wrong bits; cut a stream at its sync words."""
 
 from dataclasses import dataclass
+from math import comb
 from typing import Annotated, ClassVar
 
 import numpy as np
@@ -21,6 +22,7 @@ from pcaptool.coding.step import (
     too_short,
     whole,
 )
+from pcaptool.coding.strength import Strength
 from pcaptool.coding.sync_kernel import all_words, find_word
 
 
@@ -86,6 +88,14 @@ class Sync(Step):
         if n < size:
             raise LengthError(f"{n} bits are fewer than the {size} of the sync word")
         return n - size
+
+    def strength(self, k: int) -> Strength:
+        size = len(self.pattern)
+        if self.flywheel:
+            return Strength(f"{size} bits; a missed word is bridged")
+        share = sum(comb(size, i) for i in range(self.tolerate + 1)) / 2.0**size
+        anywhere = 1 - (1 - share) ** (self.within + 1)
+        return Strength(f"{size} bits, {self.tolerate} may be wrong", anywhere, exact=not self.within)
 
     def encode(self, data: Bits, context: Context = NO_CONTEXT, side: Bits | None = None) -> Bits:
         word = np.broadcast_to(self.pattern, (len(data), len(self.pattern)))

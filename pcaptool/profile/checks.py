@@ -10,6 +10,7 @@ from pcaptool.problem import Problem
 from pcaptool.profile.fields import message_bits
 from pcaptool.profile.model import Profile, WrapperField
 
+MOST_MORE = 1 << 17     # bits of message behind the fields for which a chain is tried
 CARRIER = ("carrier.source", "carrier.destination")
 
 
@@ -169,6 +170,7 @@ def _lengths(profile: Profile) -> Iterator[Problem]:
     """Check that air frames of a fixed size can be undone, and hold the fields."""
     size = profile.wrapper.frame_bytes
     if not isinstance(size, int) or profile.wrapper.carries != "frame":
+        yield from _some_length(profile)
         return
     try:
         k = profile.chain.data_bits(size * profile.wrapper.bits_per_byte)
@@ -180,6 +182,19 @@ def _lengths(profile: Profile) -> Iterator[Problem]:
     if need > k:
         yield _problem(profile, "message.fields", f"fields of {need} bits", f"at most {k} bits, what the chain leaves",
                        "shorten the fields, or set the frame size right")
+
+
+def _some_length(profile: Profile) -> Iterator[Problem]:
+    """Check that the steps fit each other for some length of message that holds the fields."""
+    need, why = message_bits(profile), ""
+    for k in range(max(need, 1), need + MOST_MORE):
+        try:
+            profile.chain.coded_bits(k)
+            return
+        except LengthError as error:
+            why = why or f"{k} message bits: {error}"
+    yield _problem(profile, "coding", f"steps that fit no message of {need} to {need + MOST_MORE - 1} bits",
+                   "lengths that fit each other", f"check sizes and order of the steps ({why})")
 
 
 def conflicts(profiles: Sequence[Profile]) -> list[Problem]:
