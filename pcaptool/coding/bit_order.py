@@ -52,6 +52,8 @@ class BitOrder(Step):
 
     def _reverse(self, bits: NDArray[np.uint8]) -> NDArray[np.uint8]:
         n, width = bits.shape
+        if self.unit == 1 and self.within == 8 and width:
+            return np.ascontiguousarray(bits).view(np.uint64).byteswap().view(np.uint8)
         words = bits.reshape(n, width // self.within, self.within // self.unit, self.unit)
         return np.ascontiguousarray(words[:, :, ::-1]).reshape(n, width)
 

@@ -1,5 +1,7 @@
 """Bytes of a buffer to bits, one array element each; columns of bits; numbers to bits and back."""
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
@@ -28,17 +30,28 @@ def unpack_rows(buffer: NDArray[np.uint8], start: NDArray[np.int64], n_bytes: in
 
 
 @njit(cache=True, nogil=True)
-def _take(bits: NDArray[np.uint8], columns: NDArray[np.int64]) -> NDArray[np.uint8]:
-    out = np.empty((bits.shape[0], len(columns)), np.uint8)
+def _take(bits: NDArray[Any], columns: NDArray[np.uint64], out: NDArray[Any]) -> None:
+    """Fill out[i, j] = bits[i, columns[j]]; an unsigned index spares the question whether it counts from the end."""
     for i in range(bits.shape[0]):
+        row, to = bits[i], out[i]
         for j in range(len(columns)):
-            out[i, j] = bits[i, columns[j]]
-    return out
+            to[j] = row[columns[j]]
 
 
 def take_columns(bits: NDArray[np.uint8], columns: NDArray[np.int64]) -> NDArray[np.uint8]:
-    """Return bits[:, columns], frame by frame: uint8 (frame, column)."""
-    return _take(np.ascontiguousarray(bits), columns)
+    """Return bits[:, columns], frame by frame: uint8 (frame, column).
+
+    Where columns come in whole groups of eight, eight bits are moved at a time.
+    """
+    bits = np.ascontiguousarray(bits)
+    out = np.empty((len(bits), len(columns)), np.uint8)
+    if bits.shape[1] % 8 == 0 and len(columns) % 8 == 0 and len(columns):
+        groups = columns.reshape(len(columns) // 8, 8)
+        if not (groups[:, 0] % 8).any() and (groups == groups[:, :1] + np.arange(8)).all():
+            _take(bits.view(np.uint64), (groups[:, 0] // 8).astype(np.uint64), out.view(np.uint64))
+            return out
+    _take(bits, columns.astype(np.uint64), out)
+    return out
 
 
 def bits_of(value: int, width: int) -> NDArray[np.uint8]:

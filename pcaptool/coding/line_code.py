@@ -39,11 +39,80 @@ def _levels(data: NDArray[np.uint8], toggle_on: int, level: int) -> NDArray[np.u
     return out
 
 
+@njit(cache=True, nogil=True)
+def _halves(word: NDArray[np.uint8], invert: int, data: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """Fill data with the first halves; return, in one number, whether any bit has two equal halves."""
+    unequal, flip, two, one = np.uint8(1), np.uint8(invert), np.uint64(2), np.uint64(1)
+    for i in range(data.shape[0]):
+        row, to = word[i], data[i]
+        for j in range(data.shape[1]):
+            at = np.uint64(j)
+            first = row[two * at]
+            to[at] = first ^ flip
+            unequal &= first ^ row[two * at + one]
+    return np.full(1, unequal ^ np.uint8(1), np.uint8)
+
+
+@njit(cache=True, nogil=True)
+def _differences(word: NDArray[np.uint8], level: int, invert: int, data: NDArray[np.uint8]) -> None:
+    """Fill data with the changes of level from bit to bit, inverted or not."""
+    flip, one = np.uint8(invert), np.uint64(1)
+    for i in range(data.shape[0]):
+        row, to = word[i], data[i]
+        for j in range(data.shape[1] - 1):
+            at = np.uint64(j)
+            to[at + one] = row[at + one] ^ row[at] ^ flip
+        if data.shape[1]:
+            to[0] = row[0] ^ np.uint8(level) ^ flip
+
+
+@njit(cache=True, nogil=True)
+def _begins(word: NDArray[np.uint8], level: int, invert: int, data: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """Fill data with the changes of level at the begin of every bit of two halves, inverted or not.
+
+    Returns, in one number, whether any bit has two equal halves.
+    """
+    unequal, flip, one, two = np.uint8(1), np.uint8(invert), np.uint64(1), np.uint64(2)
+    for i in range(data.shape[0]):
+        row, to = word[i], data[i]
+        for j in range(data.shape[1] - 1):
+            at = np.uint64(j)
+            to[at + one] = row[two * at + two] ^ row[two * at + one] ^ flip
+            unequal &= row[two * at] ^ row[two * at + one]
+        if data.shape[1]:
+            to[0] = row[0] ^ np.uint8(level) ^ flip
+            unequal &= row[len(row) - 2] ^ row[len(row) - 1]
+    return np.full(1, unequal ^ np.uint8(1), np.uint8)
+
+
+@njit(cache=True, nogil=True)
+def _sixes(word: NDArray[np.uint8], nibble: NDArray[np.uint32], data: NDArray[np.uint32]) -> NDArray[np.uint32]:
+    """Fill data, four bits in a number for every six; return, in one number, whether all were words of the code.
+
+    nibble  uint32 (128,)  the four bits as bytes; from 64 on, whether the word is of the code
+    """
+    all_good = np.uint32(1)
+    six, u1, u2, u3, u4, u5 = np.uint64(6), np.uint64(1), np.uint64(2), np.uint64(3), np.uint64(4), np.uint64(5)
+    for i in range(data.shape[0]):
+        row, to = word[i], data[i]
+        at = np.uint64(0)
+        for g in range(data.shape[1]):
+            high = np.uint64(row[at]) << u2 | np.uint64(row[at + u1]) << u1 | np.uint64(row[at + u2])
+            low = np.uint64(row[at + u3]) << u2 | np.uint64(row[at + u4]) << u1 | np.uint64(row[at + u5])
+            value = high << u3 | low
+            to[np.uint64(g)] = nibble[value]
+            all_good &= nibble[value + np.uint64(64)]
+            at += six
+    return np.full(1, all_good, np.uint32)
+
+
 @lru_cache(maxsize=1)
-def _nearest() -> tuple[NDArray[np.uint8], NDArray[np.bool_]]:
-    """Return (nibble of the nearest 3-out-of-6 word, whether it is one) for all words of six bits."""
+def _nearest() -> NDArray[np.uint32]:
+    """Return for words of six bits the nibble of the nearest 3-out-of-6 word, as four bytes; then whether it is one."""
     distance = np.array([[(word ^ code).bit_count() for code in THREE_OF_SIX] for word in range(64)])
-    return distance.argmin(axis=1).astype(np.uint8), distance.min(axis=1) == 0
+    best = distance.argmin(axis=1).astype(np.uint8)
+    four = np.stack([best >> j & 1 for j in (3, 2, 1, 0)], axis=1).astype(np.uint8)
+    return np.concatenate([four.view(np.uint32)[:, 0], (distance.min(axis=1) == 0).astype(np.uint32)])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -116,54 +185,56 @@ class LineCode(Step):
 
     def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
         self.data_bits(word.shape[1])
-        return self._read(word), None
+        return self._read(word)[0], None
 
-    def _read(self, word: Bits) -> Bits:
-        """Return the data of a word without violations, by an affine map."""
+    def _read(self, word: Bits) -> tuple[Bits, bool]:
+        """Return (data, whether there is a violation), by a map that is affine where there is none."""
+        word = np.ascontiguousarray(word)
+        data = np.empty((len(word), word.shape[1] // self._ratio[1]), np.uint8)
         if self.kind == "manchester":
-            return word[:, 0::2] ^ np.uint8(self.one == "01")
-        before: Bits = np.empty((len(word), word.shape[1] // self._ratio[1]), np.uint8)
-        before[:, :1] = self.level
+            return data, bool(_halves(word, self.one == "01", data)[0])
         if self.kind == "differential_manchester":
-            before[:, 1:] = word[:, 1:-1:2]
-            return before ^ word[:, 0::2] ^ np.uint8(1 - self.toggle_on)
-        before[:, 1:] = word[:, :-1]
-        return before ^ word ^ np.uint8(1 - self._changes)
+            return data, bool(_begins(word, self.level, 1 - self.toggle_on, data)[0])
+        _differences(word, self.level, 1 - self._changes, data)
+        return data, False
 
     def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
         word, doubt = batch.bits, batch.doubt
         if word.shape[1] % self._ratio[1]:
             return too_short(batch)
         if self.kind == "three_of_six":
-            nibble, good = _nearest()
-            six = _numbers(word, 6)
-            unsure = np.where(good[six], np.uint8(0), ERASED)
-            if doubt is not None:
-                unsure = np.maximum(unsure, doubt.reshape(*six.shape, 6).max(axis=2))
-            data = _bits(nibble[six], 4).reshape(len(word), six.shape[1] * 4)
-            return whole(batch, data, _or_none(unsure.repeat(4, axis=1)))
-        data = self._read(word)
+            return self._three_of_six(batch)
+        data, violated = self._read(word)
         if self.kind in ("nrzi", "differential"):
             if doubt is not None:
-                doubt = doubt.copy()
-                doubt[:, 1:] = np.maximum(doubt[:, 1:], batch.doubt[:, :-1])    # type: ignore[index]
+                worst = doubt.copy()
+                worst[:, 1:] = np.maximum(worst[:, 1:], doubt[:, :-1])
+                doubt = worst
             return whole(batch, data, doubt)
+        if not violated and doubt is None:
+            return whole(batch, data)
         first, second = word[:, 0::2], word[:, 1::2]
         broken = first == second
         if self.kind == "differential_manchester":      # the next bit is measured against the second half
-            broken = broken.copy()
             broken[:, 1:] |= word[:, 0:-2:2] == word[:, 1:-2:2]
         if doubt is None:
-            return whole(batch, data, _or_none(np.where(broken, ERASED, np.uint8(0))))
+            return whole(batch, data, np.where(broken, ERASED, np.uint8(0)))
         of_first, of_second = doubt[:, 0::2], doubt[:, 1::2]
         if self.kind == "manchester":
             data = np.where(broken & (of_second < of_first), data ^ 1, data)   # the surer half decides
         apart = np.abs(of_first.astype(np.int16) - of_second).astype(np.uint8)
         return whole(batch, data, np.where(broken, ERASED - apart, np.minimum(of_first, of_second)))
 
-
-def _or_none(doubt: NDArray[np.uint8]) -> NDArray[np.uint8] | None:
-    return doubt if doubt.any() else None
+    def _three_of_six(self, batch: Batch) -> Decoded:
+        word = np.ascontiguousarray(batch.bits)
+        groups = word.shape[1] // 6
+        data = np.empty((len(word), 4 * groups), np.uint8)
+        if _sixes(word, _nearest(), data.view(np.uint32))[0] and batch.doubt is None:
+            return whole(batch, data)
+        unsure = np.where(_nearest()[64:][_numbers(word, 6)], np.uint8(0), ERASED)
+        if batch.doubt is not None:
+            unsure = np.maximum(unsure, batch.doubt.reshape(len(word), groups, 6).max(axis=2))
+        return whole(batch, data, unsure.repeat(4, axis=1))
 
 
 def _numbers(bits: Bits, size: int) -> NDArray[np.uint8]:

@@ -28,6 +28,24 @@ def _scrambled(data: NDArray[np.uint8], delays: NDArray[np.int64], history: NDAr
     return out[:, m:]
 
 
+@njit(cache=True, nogil=True)
+def _descrambled(word: NDArray[np.uint8], delays: NDArray[np.int64], history: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """Return x[n] = y[n] + sum of y[n - d]."""
+    m, n = len(history), word.shape[1]
+    out = np.empty(word.shape, np.uint8)
+    for i in range(word.shape[0]):
+        row, to = word[i], out[i]
+        to[:] = row
+        for d in delays:
+            for j in range(min(d, n)):
+                to[j] ^= history[m - d + j]
+            off = np.uint64(d)
+            for j in range(n - d):
+                at = np.uint64(j)
+                to[at + off] ^= row[at]
+    return out
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Scramble(Step):
     """A self-synchronising (multiplicative) scrambler: every bit is added to bits sent before it.
@@ -69,12 +87,7 @@ class Scramble(Step):
         return _scrambled(np.ascontiguousarray(data), np.array(self._delays), self._history)
 
     def strip(self, word: Bits, context: Context = NO_CONTEXT) -> tuple[Bits, Bits | None]:
-        n, m, history = word.shape[1], max(self._delays), self._history
-        out = word.copy()
-        for d in self._delays:
-            out[:, d:] ^= word[:, : max(n - d, 0)]
-            out[:, :d] ^= history[m - d :][: min(d, n)]
-        return out, None
+        return _descrambled(np.ascontiguousarray(word), np.array(self._delays), self._history), None
 
     def decode(self, batch: Batch, context: Context = NO_CONTEXT) -> Decoded:
         doubt = batch.doubt

@@ -10,7 +10,7 @@ from published import bits, entries
 
 from pcaptool.coding.bch import Bch
 from pcaptool.coding.golay import Golay
-from pcaptool.coding.linear import code_weights
+from pcaptool.coding.linear import code_weights, generator_of
 from pcaptool.coding.step import OK, UNCORRECTABLE, Batch, ParameterError
 
 
@@ -59,6 +59,37 @@ def test_golay_weights_are_the_published_ones(generator):
     assert code_weights(Golay(n=23, generator=generator).code.generator) == {
         0: 1, 7: 253, 8: 506, 11: 1288, 12: 1288, 15: 506, 16: 253, 23: 1}
     assert code_weights(Golay(n=24, generator=generator).code.generator) == {0: 1, 8: 759, 12: 2576, 16: 759, 24: 1}
+
+
+def matrix(step):
+    """The generator matrix of a code, by its encoder."""
+    return step.encode(np.eye(step.data_bits(step.size), dtype=np.uint8))
+
+
+@pytest.mark.parametrize(("n", "k", "weights"), [
+    (15, 11, {0: 1, 3: 35, 4: 105, 5: 168, 6: 280, 7: 435, 8: 435, 9: 280, 10: 168, 11: 105, 12: 35, 15: 1}),
+    (15, 7, {0: 1, 5: 18, 6: 30, 7: 15, 8: 15, 9: 30, 10: 18, 15: 1}),
+    (15, 5, {0: 1, 7: 15, 8: 15, 15: 1}),
+    (31, 21, {0: 1, 5: 186, 6: 806, 7: 2635, 8: 7905, 9: 18910, 10: 41602, 11: 85560, 12: 142600, 13: 195300,
+              14: 251100, 15: 301971, 16: 301971, 17: 251100, 18: 195300, 19: 142600, 20: 85560, 21: 41602, 22: 18910,
+              23: 7905, 24: 2635, 25: 806, 26: 186, 31: 1}),
+])
+def test_weights_of_small_codes_are_the_published_ones(n, k, weights):
+    """Lin and Costello, Error Control Coding, and public tables of weight distributions; from memory."""
+    assert code_weights(matrix(Bch(n=n, k=k))) == weights
+
+
+@pytest.mark.parametrize("entry", entries("hsiao_weight4"))
+def test_hsiao_code_has_as_many_words_of_weight_4_as_published(entry):
+    """All 56 columns of weight 3, the 8 shifts of one of weight 5, 8 unit columns: H of the (72,64) code."""
+    columns = [c for c in range(256) if c.bit_count() == 3]
+    five = int(entry["params"]["weight5_column"], 2)
+    columns += [(five << s | five >> (8 - s)) & 255 for s in range(8)] + [1 << i for i in range(8)]
+    parity = np.array([[c >> i & 1 for c in columns] for i in range(8)], np.uint8)
+    weights = code_weights(generator_of(parity))
+    expected = entry["expected"]
+    assert weights is not None and weights[4] == expected["A4"], entry["source"]
+    assert 4 * weights[4] == expected["miscorrected_triples"]
 
 
 EVERY = [

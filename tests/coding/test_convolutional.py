@@ -1,6 +1,7 @@
 """Convolutional codes: published words and spectra, exhaustive search, measured error rates beside the bound."""
 
 from itertools import product
+from math import comb
 
 import numpy as np
 import pytest
@@ -128,6 +129,33 @@ def test_the_error_rate_on_a_symmetric_channel_is_the_measured_one(entry):
     fer = expected["frame_error_rate"]
     assert abs(errors - fer) < 4 * np.sqrt(fer * (1 - fer) / frames)
     assert wrong.mean() == pytest.approx(expected["ber"], rel=0.3)     # bursts of errors: 400,000 bits spread so far
+
+
+@pytest.mark.parametrize("entry", [e for e in entries("fec_probability")
+                                   if e.values[0]["params"]["model"] == "conv_union_bound_bsc"])
+def test_the_union_bound_follows_from_the_spectrum(entry):
+    """P_b <= sum c_d P_d, P_d the odds that more than half of d bits are wrong, half of the odds of a tie."""
+    p = entry["params"]
+    codes = {5: (0o7, 0o5), 10: (0o171, 0o133)}
+    _, c = distance_spectrum(codes[p["dfree"]], ["1", "1"], p["dfree"] + min(len(p["c_d"]), 12) - 1)
+    assert c[p["dfree"] :] == p["c_d"][:12]
+    error, bound = p["p"], 0.0
+    for d, weight in enumerate(p["c_d"], p["dfree"]):
+        more = sum(comb(d, i) * error**i * (1 - error) ** (d - i) for i in range(d // 2 + 1, d + 1))
+        tie = comb(d, d // 2) * (error * (1 - error)) ** (d // 2) / 2 if d % 2 == 0 else 0
+        bound += weight * (more + tie)
+    assert bound == pytest.approx(entry["expected"], rel=1e-9), entry["source"]
+
+
+def test_the_measured_error_rate_stays_below_the_union_bound():
+    step = Convolutional(constraint_length=3, generators=("7", "5"))
+    bound = next(e.values[0]["expected"] for e in entries("fec_probability")
+                 if e.values[0]["params"].get("p") == 0.01 and "c_d" in e.values[0]["params"])
+    rng = np.random.default_rng(12)
+    data = rng.integers(0, 2, (2000, 1000), np.uint8)
+    word = step.encode(data)
+    out = step.decode(Batch(word ^ (rng.random(word.shape) < 0.01).astype(np.uint8)))
+    assert 0.1 * bound < (out.bits != data).mean() < bound
 
 
 def test_a_long_frame_is_decoded_in_pieces_as_in_one(monkeypatch):
