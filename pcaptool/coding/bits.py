@@ -29,6 +29,26 @@ def unpack_rows(buffer: NDArray[np.uint8], start: NDArray[np.int64], n_bytes: in
     return _spread(buffer, start, n_bytes, _SPREAD).view(np.uint8).reshape(len(start), n_bytes * 8)
 
 
+@njit(cache=True, nogil=True, inline="always")
+def word_at(row: NDArray[np.uint8], first: Any) -> np.uint64:
+    """Return eight bytes as a number, first byte least significant; written so that it becomes one load."""
+    j, one = np.uint64(first), np.uint64(1)     # an unsigned index needs no look whether it is negative
+    return (np.uint64(row[j])
+            | np.uint64(row[j + one]) << np.uint64(8)
+            | np.uint64(row[j + np.uint64(2)]) << np.uint64(16)
+            | np.uint64(row[j + np.uint64(3)]) << np.uint64(24)
+            | np.uint64(row[j + np.uint64(4)]) << np.uint64(32)
+            | np.uint64(row[j + np.uint64(5)]) << np.uint64(40)
+            | np.uint64(row[j + np.uint64(6)]) << np.uint64(48)
+            | np.uint64(row[j + np.uint64(7)]) << np.uint64(56))
+
+
+@njit(cache=True, nogil=True, inline="always")
+def octet_at(row: NDArray[np.uint8], first: Any) -> np.uint64:
+    """Return eight bits as a number, first bit most significant: one multiplication gathers them."""
+    return (word_at(row, first) * np.uint64(0x8040201008040201)) >> np.uint64(56)
+
+
 @njit(cache=True, nogil=True)
 def _take(bits: NDArray[Any], columns: NDArray[np.uint64], out: NDArray[Any]) -> None:
     """Fill out[i, j] = bits[i, columns[j]]; an unsigned index spares the question whether it counts from the end."""

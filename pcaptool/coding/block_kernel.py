@@ -4,20 +4,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-
-@njit(cache=True, nogil=True, inline="always")
-def _octet(row: NDArray[np.uint8], first: int) -> np.uint64:
-    """Return eight bits as a number, first bit most significant: one multiplication gathers them."""
-    j, one = np.uint64(first), np.uint64(1)     # an unsigned index needs no look whether it is negative
-    x = (np.uint64(row[j])
-         | np.uint64(row[j + one]) << np.uint64(8)
-         | np.uint64(row[j + np.uint64(2)]) << np.uint64(16)
-         | np.uint64(row[j + np.uint64(3)]) << np.uint64(24)
-         | np.uint64(row[j + np.uint64(4)]) << np.uint64(32)
-         | np.uint64(row[j + np.uint64(5)]) << np.uint64(40)
-         | np.uint64(row[j + np.uint64(6)]) << np.uint64(48)
-         | np.uint64(row[j + np.uint64(7)]) << np.uint64(56))
-    return (x * np.uint64(0x8040201008040201)) >> np.uint64(56)
+from pcaptool.coding.bits import octet_at
 
 
 @njit(cache=True, nogil=True)
@@ -35,7 +22,7 @@ def syndromes_of(bits: NDArray[np.uint8], n: int, tables: NDArray[np.uint64]) ->
             first = w * n
             s = np.uint64(0)
             for g in range(whole):
-                s ^= tables[g, _octet(row, first + 8 * g)]
+                s ^= tables[g, octet_at(row, first + 8 * g)]
             if n % 8:
                 rest = np.uint64(0)
                 for j in range(first + 8 * whole, first + n):

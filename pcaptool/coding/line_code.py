@@ -10,6 +10,7 @@ from numba import njit
 from numpy.typing import NDArray
 from typing_extensions import Doc
 
+from pcaptool.coding.bits import octet_at
 from pcaptool.coding.step import (
     NO_CONTEXT,
     Batch,
@@ -25,6 +26,7 @@ from pcaptool.coding.step import (
 # Four bits as six of which three are 1; EN 13757-4, table of the "3 out of 6" code, from memory.
 THREE_OF_SIX = (0x16, 0x0D, 0x0E, 0x0B, 0x1C, 0x19, 0x1A, 0x13, 0x2C, 0x25, 0x26, 0x23, 0x34, 0x31, 0x32, 0x29)
 ERASED = np.uint8(255)
+BROKEN = 0x80           # mark of a word that is not of the code
 
 
 @njit(cache=True, nogil=True)
@@ -87,32 +89,36 @@ def _begins(word: NDArray[np.uint8], level: int, invert: int, data: NDArray[np.u
 
 @njit(cache=True, nogil=True)
 def _sixes(word: NDArray[np.uint8], nibble: NDArray[np.uint32], data: NDArray[np.uint32]) -> NDArray[np.uint32]:
-    """Fill data, four bits in a number for every six; return, in one number, whether all were words of the code.
+    """Fill data, four bits in a number for every six; return, in one number, whether any was no word of the code.
 
-    nibble  uint32 (128,)  the four bits as bytes; from 64 on, whether the word is of the code
+    nibble  uint32 (64,)  the four bits as bytes, and BROKEN where the word is not of the code
     """
-    all_good = np.uint32(1)
-    six, u1, u2, u3, u4, u5 = np.uint64(6), np.uint64(1), np.uint64(2), np.uint64(3), np.uint64(4), np.uint64(5)
+    seen, bits = np.uint32(0), np.uint32(0x01010101)
     for i in range(data.shape[0]):
         row, to = word[i], data[i]
-        at = np.uint64(0)
-        for g in range(data.shape[1]):
-            high = np.uint64(row[at]) << u2 | np.uint64(row[at + u1]) << u1 | np.uint64(row[at + u2])
-            low = np.uint64(row[at + u3]) << u2 | np.uint64(row[at + u4]) << u1 | np.uint64(row[at + u5])
-            value = high << u3 | low
-            to[np.uint64(g)] = nibble[value]
-            all_good &= nibble[value + np.uint64(64)]
-            at += six
-    return np.full(1, all_good, np.uint32)
+        last = data.shape[1] - 1
+        for g in range(last):                       # eight bits are read, six of them used
+            four = nibble[octet_at(row, 6 * g) >> np.uint64(2)]
+            to[np.uint64(g)] = four & bits
+            seen |= four
+        if last >= 0:
+            value = 0
+            for j in range(6 * last, 6 * last + 6):
+                value = value << 1 | row[j]
+            four = nibble[value]
+            to[last] = four & bits
+            seen |= four
+    return np.full(1, seen & np.uint32(BROKEN), np.uint32)
 
 
 @lru_cache(maxsize=1)
 def _nearest() -> NDArray[np.uint32]:
-    """Return for words of six bits the nibble of the nearest 3-out-of-6 word, as four bytes; then whether it is one."""
+    """Return for words of six bits the nibble of the nearest 3-out-of-6 word, as four bytes; BROKEN if it is none."""
     distance = np.array([[(word ^ code).bit_count() for code in THREE_OF_SIX] for word in range(64)])
     best = distance.argmin(axis=1).astype(np.uint8)
     four = np.stack([best >> j & 1 for j in (3, 2, 1, 0)], axis=1).astype(np.uint8)
-    return np.concatenate([four.view(np.uint32)[:, 0], (distance.min(axis=1) == 0).astype(np.uint32)])
+    nibble: NDArray[np.uint32] = four.view(np.uint32)[:, 0] | np.where(distance.min(axis=1) > 0, np.uint32(BROKEN), 0)
+    return nibble.astype(np.uint32)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -229,9 +235,9 @@ class LineCode(Step):
         word = np.ascontiguousarray(batch.bits)
         groups = word.shape[1] // 6
         data = np.empty((len(word), 4 * groups), np.uint8)
-        if _sixes(word, _nearest(), data.view(np.uint32))[0] and batch.doubt is None:
+        if not _sixes(word, _nearest(), data.view(np.uint32))[0] and batch.doubt is None:
             return whole(batch, data)
-        unsure = np.where(_nearest()[64:][_numbers(word, 6)], np.uint8(0), ERASED)
+        unsure = np.where(_nearest()[_numbers(word, 6)] & BROKEN, ERASED, np.uint8(0))
         if batch.doubt is not None:
             unsure = np.maximum(unsure, batch.doubt.reshape(len(word), groups, 6).max(axis=2))
         return whole(batch, data, unsure.repeat(4, axis=1))

