@@ -23,7 +23,9 @@ from pcaptool.profile import Profile
 
 WORTH_A_PROOF = 2000            # frames of one length before its proof is compiled
 TABLE_BYTES = 96 << 20          # memory that the proofs of one profile may take
-DECODE_ROWS = 8192              # frames decoded at a time
+DECODE_ROWS = 8192              # frames decoded at a time ...
+DECODE_BITS = 1 << 26           # ... of so many bits together
+CUT_BITS = 1 << 23              # the same for air frames that hold several
 WORTH_BYTES = 256               # longer frames: so many times WORTH_A_PROOF, as compiling takes longer
 
 
@@ -98,8 +100,9 @@ class FrameDecoder:
         begins: list[NDArray[np.int64]] = []
         sizes: list[NDArray[np.int64]] = []
         for key, members in _group([air.held], whole):
-            for at in range(0, len(members), DECODE_ROWS):
-                part = members[at : at + DECODE_ROWS]
+            step = _rows_at_once(key[0] * self.profile.wrapper.bits_per_byte, CUT_BITS)
+            for at in range(0, len(members), step):
+                part = members[at : at + step]
                 bits, doubt = self._air_bits(d, air.start[part], key[0])
                 cut = self.cutter.cut(bits, doubt, {name: air.fields[name][part] for name in self.chain.needs})
                 first = sum(len(s) for s in sources)
@@ -140,8 +143,9 @@ class FrameDecoder:
                 for at in range(0, len(good), DECODE_ROWS):
                     part = slice(at, at + DECODE_ROWS)
                     message.fill(good[part], self._decode_inner(proof, data[part], air, good[part]))
-        for at in range(0, len(members), DECODE_ROWS):
-            part_rows = members[at : at + DECODE_ROWS]
+        step = _rows_at_once(key[0] * self.profile.wrapper.bits_per_byte, DECODE_BITS)
+        for at in range(0, len(members), step):
+            part_rows = members[at : at + step]
             bits, doubt = self._air_bits(d, air.start[part_rows], key[0])
             context = {name: air.fields[name][part_rows] for name in self.chain.needs}
             message.fill(part_rows, self.chain.decode(bits, None, context, doubt))
@@ -186,6 +190,11 @@ class FrameDecoder:
         fields = {f"wrapper.{name}": values for name, values in air.fields.items()}
         return self.maker.make(origin, fields, self.maker.carriers(d, air.row), air.bits, message,
                                int((udp_checksum_ok(d, rows) == 0).sum()))
+
+
+def _rows_at_once(bits: int, most: int) -> int:
+    """Return how many frames of so many bits are decoded at a time."""
+    return max(1, min(DECODE_ROWS, most // max(bits, 1)))
 
 
 def _group(
