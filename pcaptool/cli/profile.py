@@ -47,11 +47,13 @@ def check(ctx: click.Context, names: tuple[str, ...]) -> None:
 @profile.command("list")
 def list_profiles() -> None:
     """List the shipped profiles."""
+    from textwrap import fill as wrap
+
     from pcaptool.profile import load_profile, shipped_profiles
 
     with told():
         for name, path in shipped_profiles().items():
-            click.echo(f"{name:<28} {load_profile(path).title}")
+            click.echo(wrap(load_profile(path).title, 80, initial_indent=f"{name:<28} ", subsequent_indent=" " * 29))
 
 
 @profile.command(no_args_is_help=True)

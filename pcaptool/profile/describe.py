@@ -9,6 +9,8 @@ from pcaptool.coding.step import LengthError
 from pcaptool.profile.fields import message_bits
 from pcaptool.profile.model import Field, Profile, WrapperField
 
+IN_HEX = ("poly", "seed", "generator", "init", "xorout", "value", "parity")
+
 
 def describe(profile: Profile) -> str:
     """Return the profile's carrier, wrapper, chain in the transmitter's order, message and limits."""
@@ -21,8 +23,12 @@ def describe(profile: Profile) -> str:
     for title, group in (("wrapper", w.before), ("each", w.each), ("after", w.after)):
         lines += _layout(title, group, "bytes")
     size = "all that is left" if w.frame_bytes is None else f"{w.frame_bytes} bytes"
-    lines += [f"air frame {size}; the gateway forwards {w.forwards}", "", "chain, as the transmitter applies it:"]
-    lines += [f"  {i + 1}. {_step(step)}" for i, step in enumerate(profile.coding)] or ["  none"]
+    carried = {"frame": "", "frames": ", several frames in it", "stream": ", a piece of a stream"}[w.carries]
+    soft = f", {w.soft_bits} soft bits" if w.soft_bits else ""
+    lines += [f"air frame {size}{carried}{soft}; the gateway forwards {w.forwards}", "", "chain, as the transmitter applies it:"]
+    for i, step in enumerate(profile.coding):
+        lines += textwrap.wrap(_step(step), 80, initial_indent=f"  {i + 1}. ", subsequent_indent=" " * 5)
+    lines += [] if profile.coding else ["  none"]
     lines += _rate(profile)
     lines += ["", *_layout("message", profile.message.fields, "bits")]
     for kind in profile.message.kind:
@@ -45,10 +51,15 @@ def _wrapped(text: str) -> list[str]:
 
 
 def _step(step: Step) -> str:
-    shown = [f"{f.name} = {getattr(step, f.name)}" for f in fields(step)  # type: ignore[arg-type]
+    shown = [f"{f.name} = {_value(f.name, getattr(step, f.name))}" for f in fields(step)  # type: ignore[arg-type]
              if getattr(step, f.name) != f.default]
-    text = step.name + (": " + ", ".join(shown) if shown else "")
-    return text if len(text) <= 74 else text[:73] + "…"
+    return step.name + (": " + ", ".join(shown) if shown else "")
+
+
+def _value(name: str, value: object) -> str:
+    if isinstance(value, tuple):
+        return ", ".join(_value(name, v) for v in value)
+    return f"{value:#x}" if isinstance(value, int) and name in IN_HEX else str(value)
 
 
 def _layout(title: str, group: Sequence[Field | WrapperField], unit: str) -> list[str]:
