@@ -25,7 +25,8 @@ def describe(profile: Profile) -> str:
     size = "all that is left" if w.frame_bytes is None else f"{w.frame_bytes} bytes"
     carried = {"frame": "", "frames": ", several frames in it", "stream": ", a piece of a stream"}[w.carries]
     soft = f", {w.soft_bits} soft bits" if w.soft_bits else ""
-    lines += [f"air frame {size}{carried}{soft}; the gateway forwards {w.forwards}", "", "chain, as the transmitter applies it:"]
+    lines += [f"air frame {size}{carried}{soft}; the gateway forwards {w.forwards}", "",
+              "chain, as the transmitter applies it:"]
     for i, step in enumerate(profile.coding):
         lines += textwrap.wrap(_step(step), 80, initial_indent=f"  {i + 1}. ", subsequent_indent=" " * 5)
     lines += [] if profile.coding else ["  none"]
