@@ -24,6 +24,7 @@ ROW_GROUP = 1 << 17
 STATIC = ("capture", "profile", "state", "arrival", "reason")     # labels whose words are the same in every chunk
 LABEL = pa.dictionary(pa.int32(), pa.string())
 TYPES = {"label": LABEL, "timestamp": pa.timestamp("ns", "UTC")}
+WHOLE = (pa.int64(), pa.int32(), pa.int16(), TYPES["timestamp"])
 
 
 def arrow_type(column: Column) -> pa.DataType:
@@ -71,7 +72,7 @@ class _RowGroups:
     """
 
     def __init__(self, path: Path, schema: pa.Schema, size: int, thread: Executor, **options: Any) -> None:
-        self._writer = pq.ParquetWriter(path, schema, compression="snappy", **options)
+        self._writer = pq.ParquetWriter(path, schema, **options)
         self._schema, self._size, self._thread = schema, size, thread
         self._waiting: list[pa.RecordBatch] = []
         self._rows = 0
@@ -118,10 +119,11 @@ class FrameTable:
         self._errors: _RowGroups | None = None
         if folder is not None:
             labels = [c.name for c in self.columns if c.dtype == "label"]
-            wide = [f.name for f in self.schema if f.type in (pa.int64(), pa.int32(), TYPES["timestamp"])]
+            deltas = [f.name for f in self.schema if f.type in WHOLE]       # packed so, no compression gains more
             self._frames = _RowGroups(
                 folder / "frames.parquet", self.schema, ROW_GROUP, self._thread, use_dictionary=labels,
-                write_statistics=["time"], column_encoding=dict.fromkeys(wide, "DELTA_BINARY_PACKED"))
+                write_statistics=["time"], column_encoding=dict.fromkeys(deltas, "DELTA_BINARY_PACKED"),
+                compression={n: "none" if n in deltas else "snappy" for n in self.schema.names})
             self._errors = _RowGroups(folder / "errors.parquet", self.errors_schema, 4 * ROW_GROUP, self._thread,
                                       use_dictionary=False, write_statistics=False)
 

@@ -8,6 +8,7 @@ import pytest
 
 import pcaptool
 from pcaptool.audit import Options
+from pcaptool.profile import load_profile, parse_profile
 from pcaptool.simulate import make_plan, simulate
 
 TABLES = ("links.csv", "gaps.csv", "intervals.csv")
@@ -36,8 +37,8 @@ def capture():
     return simulate("merrowdale", plan).captures[0]
 
 
-def tables(paths, tmp_path, **options):
-    audit = pcaptool.audit(paths, profile="merrowdale", options=Options(**options) if options else None)
+def tables(paths, tmp_path, profile="merrowdale", **options):
+    audit = pcaptool.audit(paths, profile=profile, options=Options(**options) if options else None)
     audit.write(tmp_path)
     frames = audit.frames.drop(columns=["capture", "packet"]).to_csv(index=False)
     errors = audit.errors.to_csv(index=False)
@@ -74,15 +75,22 @@ def test_compressed_captures_and_batches_do_not_matter(capture, tmp_path, monkey
     assert tables([plain], tmp_path / "out-3") == whole
 
 
-def test_processes_and_pieces_give_the_same_bytes(capture, tmp_path, monkeypatch):
+@pytest.mark.parametrize("key", ['["wrapper.gateway", "unit"]', '["wrapper.gateway"]'])
+def test_processes_and_pieces_give_the_same_bytes(key, capture, tmp_path, monkeypatch):
+    """Where the wrapper alone names the link, pieces decoded in this process go on without a file."""
+    text = load_profile("merrowdale").text
+    profile = parse_profile(text.replace('["wrapper.gateway", "unit"]', key).encode(), "t.toml")
+    assert key in profile.text
     path = tmp_path / "a.pcap"
     path.write_bytes(capture)
-    whole = tables([path], tmp_path / "out-1", jobs=1)
+    whole = tables([path], tmp_path / "out-1", profile, jobs=1)
     monkeypatch.setattr("pcaptool.audit.run.WORTH_PROCESSES", 1)
     monkeypatch.setattr("pcaptool.audit.run.PIECE_BYTES", 20_000)
-    assert tables([path], tmp_path / "out-2", jobs=2) == whole
-    for name in ("summary.json", "report.html", "captures.csv", "frames.parquet", "errors.parquet"):
-        assert (tmp_path / "out-1" / name).read_bytes() == (tmp_path / "out-2" / name).read_bytes(), name
+    for jobs in (1, 2):
+        out = tmp_path / f"jobs-{jobs}"
+        assert tables([path], out, profile, jobs=jobs) == whole
+        for name in ("summary.json", "report.html", "captures.csv", "frames.parquet", "errors.parquet"):
+            assert (tmp_path / "out-1" / name).read_bytes() == (out / name).read_bytes(), name
 
 
 def test_the_same_datagram_recorded_twice_counts_once(capture, tmp_path):
