@@ -10,7 +10,7 @@ from numba import njit
 from numpy.typing import NDArray
 from typing_extensions import Doc
 
-from pcaptool.coding.bits import octet_at
+from pcaptool.coding.bits import numbers_of, octet_at
 from pcaptool.coding.step import (
     NO_CONTEXT,
     Batch,
@@ -177,7 +177,7 @@ class LineCode(Step):
             return _levels(np.ascontiguousarray(data), self._changes, self.level)
         out = np.empty((len(data), n), np.uint8)
         if self.kind == "three_of_six":
-            words = np.array(THREE_OF_SIX, np.uint8)[_numbers(data, 4)]
+            words = np.array(THREE_OF_SIX, np.uint8)[numbers_of(data.reshape(len(data), data.shape[1] // 4, 4))]
             return _bits(words, 6).reshape(len(data), n)
         if self.kind == "manchester":
             out[:, 0::2] = data if self.one == "10" else data ^ 1
@@ -237,19 +237,11 @@ class LineCode(Step):
         data = np.empty((len(word), 4 * groups), np.uint8)
         if not _sixes(word, _nearest(), data.view(np.uint32))[0] and batch.doubt is None:
             return whole(batch, data)
-        unsure = np.where(_nearest()[_numbers(word, 6)] & BROKEN, ERASED, np.uint8(0))
+        six = numbers_of(word.reshape(len(word), groups, 6))
+        unsure = np.where(_nearest()[six] & BROKEN, ERASED, np.uint8(0))
         if batch.doubt is not None:
             unsure = np.maximum(unsure, batch.doubt.reshape(len(word), groups, 6).max(axis=2))
         return whole(batch, data, unsure.repeat(4, axis=1))
-
-
-def _numbers(bits: Bits, size: int) -> NDArray[np.uint8]:
-    """Return groups of bits as numbers, first bit most significant: uint8 (frame, group)."""
-    groups = bits.reshape(len(bits), bits.shape[1] // size, size)
-    out = np.zeros(groups.shape[:2], np.uint8)
-    for j in range(size):
-        out = out << 1 | groups[:, :, j]
-    return out
 
 
 def _bits(numbers: NDArray[np.uint8], size: int) -> Bits:

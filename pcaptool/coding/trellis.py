@@ -61,15 +61,25 @@ def distance_spectrum(
 
 
 def free_distance(generators: Sequence[int], puncture: Sequence[str]) -> int:
-    """Return the least weight of a path that leaves the zero state and comes back; 0 where none was found.
+    """Return the least weight of a path that leaves the zero state and comes back; 0 where none does.
 
-    Searched up to what the best codes of that constraint length and rate reach by far.
+    The lightest path into every state, step by step, from every step of the puncture pattern.
     """
-    most = 8
-    while most <= 256:
-        a, _ = distance_spectrum(generators, puncture, most)
-        least = next((d for d, paths in enumerate(a) if paths), None)
-        if least is not None:
-            return least
-        most *= 2
-    return 0
+    outputs = branch_outputs(generators, [0] * len(generators))
+    states = np.arange(outputs.shape[1])
+    half, period, far = len(states) // 2, len(puncture[0]), 1 << 30
+    before = [(states << 1) & (len(states) - 1) | lost for lost in (0, 1)]
+    ones = np.array([byte.bit_count() for byte in range(256)])
+    sent = [sum(1 << b for b, row in enumerate(puncture) if row[j] == "1") for j in range(period)]
+    weight = [ones[outputs & mask] for mask in sent]
+    least = far
+    for phase in range(period):
+        lightest = np.full(len(states), far)
+        lightest[half] = weight[phase][0, half]
+        for step in range(phase + 1, phase + 1 + 64 * period * len(generators) * len(states).bit_length()):
+            w = weight[step % period]
+            lightest = np.minimum(lightest[before[0]] + w[0], lightest[before[1]] + w[1])
+            least, lightest[0] = min(least, int(lightest[0])), far
+            if lightest.min() >= least:
+                break
+    return least if least < far else 0
