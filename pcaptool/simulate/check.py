@@ -22,6 +22,12 @@ def plan_problems(profile: Profile, plan: Plan, origin: str) -> list[Problem]:
         return Problem(file=origin, place=place, found=found, expected=expected, fix=fix)
 
     problems: list[Problem] = []
+    for key in ("carries", "soft_bits"):
+        value = getattr(profile.wrapper, key)
+        if value in ("stream", "signed-8", "signed-4"):
+            return [Problem(file=profile.origin, place=f"wrapper.{key}", found=repr(value),
+                            expected="air frames of hard bits, each with whole frames in it",
+                            fix="simulate with a profile without it; neither is simulated")]
     if home(profile) is None:
         problems.append(Problem(file=profile.origin, place="carrier.net", found="IPv6 networks only",
                                 expected="an IPv4 network", fix="add one; simulated packets are IPv4"))
@@ -156,6 +162,17 @@ def _generator(place: str, field: Field | WrapperField, plan: Generator) -> Foun
         yield place, f"low {plan.low:g}, high {plan.high:g}", "low below high", "set the two right"
 
 
+def _fitting(profile: Profile, bits: int) -> int | None:
+    """Return the least octets behind a message's fields with which the chain can encode it."""
+    for octets in range(4097):
+        try:
+            profile.chain.coded_bits(bits + 8 * octets)
+            return octets
+        except LengthError:
+            continue
+    return None
+
+
 def _lengths(profile: Profile, link: LinkPlan, names: list[str]) -> Found:
     """Check that the chain makes air frames of the messages, of the size that the wrapper says."""
     low, high = link.payload
@@ -169,8 +186,9 @@ def _lengths(profile: Profile, link: LinkPlan, names: list[str]) -> Found:
             try:
                 air = -(-profile.chain.coded_bits(bits) // 8)
             except LengthError as error:
+                fit = _fitting(profile, message_bits(profile, kind))
                 yield ("payload", what, f"a length that the chain can encode ({error})",
-                       "set payload or kinds to fit")
+                       f"set payload = [{fit}, {fit}]" if fit is not None else "set payload or kinds to fit")
                 return
             size = profile.wrapper.frame_bytes
             if isinstance(size, int) and air != size:

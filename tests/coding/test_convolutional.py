@@ -47,9 +47,9 @@ def test_the_distance_spectrum_is_the_published_one(entry):
 
 
 @pytest.mark.parametrize(("generators", "distance"), [
-    ((0o7, 0o5), 5), ((0o17, 0o13), 6), ((0o35, 0o23), 7), ((0o75, 0o53), 8), ((0o171, 0o133), 10), ((0o371, 0o247), 10),
-    ((0o561, 0o753), 12), ((0o1167, 0o1545), 12), ((0o4335, 0o5723), 15), ((0o21675, 0o27123), 16),
-    ((0o55367, 0o63121), 18), ((0o7, 0o7, 0o5), 8), ((0o15, 0o13, 0o17), 10),
+    ((0o7, 0o5), 5), ((0o17, 0o13), 6), ((0o35, 0o23), 7), ((0o75, 0o53), 8), ((0o171, 0o133), 10),
+    ((0o371, 0o247), 10), ((0o561, 0o753), 12), ((0o1167, 0o1545), 12), ((0o4335, 0o5723), 15),
+    ((0o21675, 0o27123), 16), ((0o55367, 0o63121), 18), ((0o7, 0o7, 0o5), 8), ((0o15, 0o13, 0o17), 10),
 ])
 def test_free_distances_of_the_best_codes(generators, distance):
     """Tables of codes of maximum free distance: Larsen (1973), Lin and Costello; from memory."""

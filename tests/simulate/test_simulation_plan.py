@@ -8,6 +8,7 @@ import pytest
 from pcaptool.problem import Problem, UsageError
 from pcaptool.profile import load_profile
 from pcaptool.simulate import Plan, even_plan, load_plan, make_plan, simulate
+from pcaptool.simulate.check import plan_problems
 
 WRONG_IN_ITSELF = '''
 sed = 3
@@ -135,3 +136,15 @@ def test_problems_of_figures_are_told_once(links: int, link: dict[str, Any], pla
     with pytest.raises(UsageError) as caught:
         even_plan(load_profile("merrowdale"), links=links, frames=1, interval=1, link=link, rest={})
     assert [p.place for p in caught.value.problems] == [place]
+
+
+def test_a_payload_that_fits_the_chain_is_named():
+    """RS(255,223), depth 5: 1115 octets, without the check 2 and the header's 6."""
+    plan = make_plan({"link": [{"key": {"spacecraft": 1, "channel": 1}}]}, "t")
+    found = plan_problems(load_profile("ccsds-tm"), plan, "t")
+    assert [p.fix for p in found if p.place.endswith("payload")] == ["set payload = [1107, 1107]"]
+
+
+def test_streams_are_not_simulated_and_that_is_said():
+    found = plan_problems(load_profile("ccsds-tm-convolutional"), make_plan({"link": [{}]}, "t"), "t")
+    assert [(p.place, p.found) for p in found] == [("wrapper.carries", "'stream'")]
