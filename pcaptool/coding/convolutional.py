@@ -1,7 +1,7 @@
 """Convolutional codes, also punctured, tail-biting, recursive; Viterbi decoding with hard or soft decisions."""
 
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import lru_cache, reduce
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
@@ -10,7 +10,9 @@ from numba import njit
 from numpy.typing import NDArray
 from typing_extensions import Doc
 
+from pcaptool.coding.cyclic import greatest_common_divisor
 from pcaptool.coding.differences import count_differences
+from pcaptool.coding.field import polynomial_text
 from pcaptool.coding.step import (
     NO_CONTEXT,
     Batch,
@@ -165,6 +167,12 @@ class Convolutional(Step):
             if any(not any(row[j] == "1" for row in self.puncture) for j in range(widths.pop())):
                 raise ParameterError("puncture", found="a column without a 1", expected="a bit sent in every step",
                                      fix="check the pattern, column by column")
+        common = reduce(greatest_common_divisor, self._taps)
+        common //= common & -common                 # a factor x only delays
+        if common > 1 and not self.feedback:
+            raise ParameterError("generators", found=f"a common factor {polynomial_text(common)}",
+                                 expected="none: with it, few wrong bits can make data wrong without end",
+                                 fix="check the generators; such a code is called catastrophic")
         if self.feedback:
             if not octal(self.feedback) >> (K - 1) & 1:
                 raise ParameterError("feedback", found=f"{octal(self.feedback):o} octal",

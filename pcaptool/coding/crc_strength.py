@@ -11,28 +11,12 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from pcaptool.coding.cyclic import product, remainder
+from pcaptool.coding.cyclic import greatest_common_divisor, product, quotient, remainder
 
 WORK = 200_000_000      # look-ups after which the search for a light pattern ends
 LARGEST_TABLE = 1 << 25
 EMPTY = np.uint64(2**64 - 1)
 MIX = np.uint64(0x9E3779B97F4A7C15)     # 2**64 / golden ratio, Knuth, TAOCP vol. 3, 6.4
-
-
-def quotient(a: int, b: int) -> int:
-    """Return a divided by b, without the remainder."""
-    out = 0
-    while a.bit_length() >= b.bit_length():
-        shift = a.bit_length() - b.bit_length()
-        out |= 1 << shift
-        a ^= b << shift
-    return out
-
-
-def greatest_common_divisor(a: int, b: int) -> int:
-    while b:
-        a, b = b, remainder(a, b)
-    return a
 
 
 def _derivative(a: int) -> int:

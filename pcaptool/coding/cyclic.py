@@ -1,4 +1,4 @@
-"""Cyclic binary codes: systematic generator matrix and division of polynomials over GF(2)."""
+"""Polynomials over GF(2) as numbers, bit i for x^i, and the systematic generator matrix of a cyclic code."""
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +20,22 @@ def product(a: int, b: int) -> int:
             out ^= a
         a, b = a << 1, b >> 1
     return out
+
+
+def quotient(a: int, b: int) -> int:
+    """Return a divided by b, without the remainder."""
+    out = 0
+    while a.bit_length() >= b.bit_length():
+        shift = a.bit_length() - b.bit_length()
+        out |= 1 << shift
+        a ^= b << shift
+    return out
+
+
+def greatest_common_divisor(a: int, b: int) -> int:
+    while b:
+        a, b = b, remainder(a, b)
+    return a
 
 
 def cyclic_generator(poly: int, n: int, k: int) -> NDArray[np.uint8]:

@@ -222,6 +222,7 @@ def test_lengths_that_do_not_fit_are_short():
     ({"constraint_length": 7, "generators": ("171", "133"), "puncture": ("101",)}, "puncture", "2 rows"),
     ({"constraint_length": 7, "generators": ("171", "133"), "puncture": ("10", "10")}, "puncture", "without a 1"),
     ({"constraint_length": 7, "generators": ("171", "133"), "inverted": (1,)}, "inverted", "2 values"),
+    ({"constraint_length": 3, "generators": ("5", "6")}, "generators", "common factor x \\+ 1"),
     ({"constraint_length": 4, "generators": ("13", "15"), "feedback": "17"}, "generators", "none equal"),
     ({"constraint_length": 4, "generators": ("17", "15"), "feedback": "17", "tail": "biting"}, "tail", "biting"),
 ])
