@@ -72,11 +72,6 @@ class _Stream:
         return int(self._least[self._next])
 
     def read(self) -> Chunk:
-        kept = self.source.part.kept
-        if kept is not None:
-            batches = kept.pop(0)
-            self._next += 1
-            return self._chunk(*batches)
         if not self._readers:
             paths = (self.source.part.path, self.source.part.errors_path)
             self._files = [pa.OSFile(str(path)) for path in paths]
@@ -88,9 +83,6 @@ class _Stream:
                 file.close()
             self.source.part.path.unlink()
             self.source.part.errors_path.unlink()
-        return self._chunk(frames, errors)
-
-    def _chunk(self, frames: pa.RecordBatch, errors: pa.RecordBatch) -> Chunk:
         columns: Columns = {
             name: numpy_column(values)
             for name, values in zip(frames.schema.names, frames.columns, strict=True)

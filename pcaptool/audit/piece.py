@@ -46,7 +46,6 @@ class Part:
     least_order: list[int] = field(default_factory=list)    # per batch in the file
     usable_keys: NDArray[np.uint64] = field(default_factory=lambda: np.zeros(0, np.uint64))
     hashed: dict[int, tuple[int, ...]] = field(default_factory=dict)
-    kept: list[tuple[pa.RecordBatch, pa.RecordBatch]] | None = None     # frames and errors, instead of the files
 
     @property
     def errors_path(self) -> Path:
@@ -68,13 +67,10 @@ class PieceResult:
     fragments: dict[str, list[OpenFragment]] = field(default_factory=dict)  # left over, by ledger entry
 
 
-def decode_piece(job: Job, decoders: Sequence[FrameDecoder] | None = None, keep: bool = False) -> PieceResult:
-    """Decode a piece with every profile; a datagram goes to the first profile that claims it.
-
-    keep  hold the frames in memory, for a caller in this process that takes them at once
-    """
+def decode_piece(job: Job, decoders: Sequence[FrameDecoder] | None = None) -> PieceResult:
+    """Decode a piece with every profile; a datagram goes to the first profile that claims it."""
     decoders = decoders or [FrameDecoder(p) for p in job.profiles]
-    writers = [_PartWriter(i, job.folder / f"{job.name}-{i}.arrow", d, keep) for i, d in enumerate(decoders)]
+    writers = [_PartWriter(i, job.folder / f"{job.name}-{i}.arrow", d) for i, d in enumerate(decoders)]
     if job.piece is None:
         return _decode_fragments(job, decoders, writers)
     reader = read_datagrams(job.piece)
@@ -124,8 +120,8 @@ def _decode_fragments(job: Job, decoders: Sequence[FrameDecoder], writers: Seque
 
 
 class _PartWriter:
-    def __init__(self, profile: int, path: Path, decoder: FrameDecoder, keep: bool) -> None:
-        self.part = Part(profile, path, kept=[] if keep else None)
+    def __init__(self, profile: int, path: Path, decoder: FrameDecoder) -> None:
+        self.part = Part(profile, path)
         self._decoder = decoder
         self._writers: list[pa.RecordBatchWriter] = []
         self._sinks: list[pa.OSFile] = []
@@ -136,22 +132,16 @@ class _PartWriter:
             return
         batches = (to_arrow(frames, self._decoder.profile, self._decoder.maker), pa.record_batch(
             [arrow_array(frames.error_frame), arrow_array(frames.error_position)], ["frame", "position"]))
-        if self.part.kept is not None:
-            self.part.kept.append(batches)
-        else:
-            self._write(batches)
-        self.part.frames += len(frames)
-        self.part.least_order.append(int(frames.order.min()))
-        if self._decoder.maker.link.needs_message and frames.air is None:
-            self._keys.number(frames.key[(frames.state < CORRUPTED) & (frames.key != NO_KEY)])
-
-    def _write(self, batches: tuple[pa.RecordBatch, pa.RecordBatch]) -> None:
         if not self._writers:
             for path, batch in zip((self.part.path, self.part.errors_path), batches, strict=True):
                 self._sinks.append(pa.OSFile(str(path), "wb"))
                 self._writers.append(pa.ipc.new_stream(self._sinks[-1], batch.schema))
         for writer, batch in zip(self._writers, batches, strict=True):
             writer.write_batch(batch)
+        self.part.frames += len(frames)
+        self.part.least_order.append(int(frames.order.min()))
+        if self._decoder.maker.link.needs_message and frames.air is None:
+            self._keys.number(frames.key[(frames.state < CORRUPTED) & (frames.key != NO_KEY)])
 
     def close(self) -> None:
         for closing in (*self._writers, *self._sinks):

@@ -28,8 +28,6 @@ class Pieces:
         self.sources: list[Source] = []
         self._captures, self._profiles, self._scratch, self._problems = captures, profiles, scratch, problems
         self._progress = progress
-        # pieces of one capture are merged one after the other, and need no file when they are decoded here
-        self._keep = len(captures) == 1 and len(profiles) == 1 and all("." in r for r in profiles[0].link.by)
         self._early: dict[int, PieceResult] = {}
         self._pending = list(pending)
         self._next = self._shift = self._frames = self._bytes = 0
@@ -79,7 +77,7 @@ class Pieces:
         if rank in self._early:
             return self._early.pop(rank)
         if future is None or future.cancel():
-            return decode_piece(job, keep=self._keep)
+            return decode_piece(job)
         last = len(self._pending)
         while not future.done() and last > rank + 1:
             last -= 1

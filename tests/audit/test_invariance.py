@@ -77,7 +77,7 @@ def test_compressed_captures_and_batches_do_not_matter(capture, tmp_path, monkey
 
 @pytest.mark.parametrize("key", ['["wrapper.gateway", "unit"]', '["wrapper.gateway"]'])
 def test_processes_and_pieces_give_the_same_bytes(key, capture, tmp_path, monkeypatch):
-    """Where the wrapper alone names the link, pieces decoded in this process go on without a file."""
+    """Also where the wrapper alone names the link, so that no key must be judged before the merge."""
     text = load_profile("merrowdale").text
     profile = parse_profile(text.replace('["wrapper.gateway", "unit"]', key).encode(), "t.toml")
     assert key in profile.text
