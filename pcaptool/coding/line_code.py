@@ -229,7 +229,10 @@ class LineCode(Step):
         if self.kind == "manchester":
             data = np.where(broken & (of_second < of_first), data ^ 1, data)   # the surer half decides
         apart = np.abs(of_first.astype(np.int16) - of_second).astype(np.uint8)
-        return whole(batch, data, np.where(broken, ERASED - apart, np.minimum(of_first, of_second)))
+        own = np.where(first == second, ERASED - apart, np.minimum(of_first, of_second))
+        if self.kind == "differential_manchester":
+            own[:, 1:] = np.maximum(own[:, 1:], own[:, :-1].copy())
+        return whole(batch, data, own)
 
     def _three_of_six(self, batch: Batch) -> Decoded:
         word = np.ascontiguousarray(batch.bits)
@@ -237,11 +240,22 @@ class LineCode(Step):
         data = np.empty((len(word), 4 * groups), np.uint8)
         if not _sixes(word, _nearest(), data.view(np.uint32))[0] and batch.doubt is None:
             return whole(batch, data)
-        six = numbers_of(word.reshape(len(word), groups, 6))
-        unsure = np.where(_nearest()[six] & BROKEN, ERASED, np.uint8(0))
-        if batch.doubt is not None:
-            unsure = np.maximum(unsure, batch.doubt.reshape(len(word), groups, 6).max(axis=2))
-        return whole(batch, data, unsure.repeat(4, axis=1))
+        if batch.doubt is None:
+            six = numbers_of(word.reshape(len(word), groups, 6))
+            unsure = np.where(_nearest()[six] & BROKEN, ERASED, np.uint8(0))
+            return whole(batch, data, unsure.repeat(4, axis=1))
+        return self._weighed(batch, groups)
+
+    def _weighed(self, batch: Batch, groups: int) -> Decoded:
+        """Take the word nearest by the sure bits; the doubt falls with the distance of the next best."""
+        came = batch.bits.reshape(len(batch.bits), groups, 6)
+        sure = 255 - batch.doubt.reshape(came.shape).astype(np.int32)       # type: ignore[union-attr]
+        codes = (np.array(THREE_OF_SIX)[:, None] >> np.arange(5, -1, -1) & 1).astype(np.uint8)
+        distance = np.stack([((came != code) * sure).sum(axis=2) for code in codes], axis=2)
+        best = distance.argmin(axis=2).astype(np.uint8)
+        least = np.sort(distance, axis=2)[:, :, :2]
+        unsure = (255 - np.minimum(least[:, :, 1] - least[:, :, 0], 255)).astype(np.uint8)
+        return whole(batch, _bits(best, 4).reshape(len(came), groups * 4), unsure.repeat(4, axis=1))
 
 
 def _bits(numbers: NDArray[np.uint8], size: int) -> Bits:

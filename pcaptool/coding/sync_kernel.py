@@ -58,19 +58,44 @@ def _near(row: NDArray[np.uint8], at: int, n: int, word: NDArray[np.uint8], tole
 
 
 @njit(cache=True, nogil=True)
+def _believed(row: NDArray[np.uint8], p: int, n: int, word: NDArray[np.uint8], tolerate: int, every: int, slip: int,
+              flywheel: int) -> bool:
+    """Return whether a word stands at a place and one of the next is in its place, or the row ends before the next."""
+    if _wrong(row, p, word, tolerate) > tolerate:
+        return False
+    for k in range(1, flywheel + 2):
+        behind = p + k * every
+        if behind + len(word) > n:
+            return k == 1
+        if _near(row, behind, n, word, tolerate, k * slip) >= 0:
+            return True
+    return False
+
+
+@njit(cache=True, nogil=True)
 def all_words(bits: NDArray[np.uint8], length: NDArray[np.int64], word: NDArray[np.uint8], tolerate: int, every: int,
               slip: int, flywheel: int) -> NDArray[np.int64]:
     """Return (row, begin) of every frame of ``every`` bits that begins with a sync word: int64 (frame, 2).
 
     Out of lock, a place is believed where the next sync word is in its place, or one of the ``flywheel``
-    ones behind it, or where the row ends before any of them.
+    ones behind it, or where the row ends before the next. Frames given out on trust at the end of a row
+    give way to a believable word behind the last one that was recognised.
     """
     room, count = 64, 0
     out = np.empty((room, 2), np.int64)
     for i in range(bits.shape[0]):
         row, n = bits[i], length[i]
         p, locked, missed, last = 0, False, 0, 0
-        while p + every <= n:
+        while True:
+            if p + every > n:
+                if not (locked and missed):
+                    break
+                again = last + 1
+                while again + every <= n and not _believed(row, again, n, word, tolerate, every, slip, 0):
+                    again += 1
+                if again + every > n:
+                    break
+                count, p, locked, missed = count - missed, again, False, 0
             if locked:
                 at = _near(row, p, n, word, tolerate, slip)
                 if at >= 0 and at + every <= n:
@@ -87,11 +112,7 @@ def all_words(bits: NDArray[np.uint8], length: NDArray[np.int64], word: NDArray[
                 if _wrong(row, p, word, tolerate) > tolerate:
                     p += 1
                     continue
-                for k in range(1, flywheel + 2):
-                    behind = p + k * every
-                    if behind + len(word) > n or _near(row, behind, n, word, tolerate, k * slip) >= 0:
-                        locked = True
-                        break
+                locked = _believed(row, p, n, word, tolerate, every, slip, flywheel)
                 if not locked:
                     p += 1
                     continue

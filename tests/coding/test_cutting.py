@@ -120,6 +120,20 @@ def test_a_sync_word_in_the_data_is_not_believed_when_none_follows():
     assert [b for _, b, _ in find(STREAM, row)] == [29, 69, 109]
 
 
+@pytest.mark.parametrize("flywheel", [0, 1, 3])
+def test_a_false_word_near_the_end_of_a_row_costs_no_true_frame(flywheel):
+    step = Sync(word="0b" + WORD, tolerate=1, every=40, flywheel=flywheel)
+    row = "01" * 3 + WORD + "01" * 3 + "".join(stream(np.random.default_rng(6), 3))
+    assert [b for _, b, _ in find(step, row)] == [23, 63, 103]
+
+
+def test_frames_on_trust_give_way_to_true_ones_behind_a_gap():
+    step = Sync(word="0b" + WORD, tolerate=1, every=40, flywheel=2)
+    frames = stream(np.random.default_rng(7), 5)
+    row = "".join(frames[:3]) + "01" * 9 + "".join(frames[3:])
+    assert [b for _, b, _ in find(step, row)] == [0, 40, 80, 138, 178]
+
+
 def test_the_last_frame_is_given_out_only_when_whole():
     row = "".join(stream(np.random.default_rng(5), 3))
     assert [b for _, b, _ in find(STREAM, row[:-1])] == [0, 40]

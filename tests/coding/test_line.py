@@ -82,6 +82,31 @@ def test_the_surer_half_of_a_broken_manchester_bit_decides():
     assert out.doubt[0].tolist() == [65, 0, 0]
 
 
+def test_doubt_reaches_every_bit_that_depends_on_it():
+    """Differential Manchester measures a bit against the pair before it."""
+    step = LineCode(kind="differential_manchester")
+    word, doubt = step.encode(bits("10110")), np.zeros((1, 10), np.uint8)
+    word[0, 2:4] ^= 1
+    doubt[0, 2:4] = 255
+    out = step.decode(Batch(word, doubt))
+    assert out.doubt[0].tolist() == [0, 255, 255, 0, 0]
+    wrong = out.bits[0] != bits("10110")[0]
+    assert (out.doubt[0][wrong] == 255).all()
+
+
+def test_five_sure_bits_settle_a_three_of_six_word():
+    step = LineCode(kind="three_of_six")
+    for value in range(16):
+        data = bits(f"{value:04b}")
+        for j in range(6):
+            word, doubt = step.encode(data), np.zeros((1, 6), np.uint8)
+            word[0, j] ^= 1
+            doubt[0, j] = 255
+            out = step.decode(Batch(word, doubt))
+            assert_array_equal(out.bits, data)
+            assert not out.doubt.any()
+
+
 @pytest.mark.parametrize("entry", entries("self_sync"))
 def test_published_scrambler_outputs(entry):
     p = entry["params"]
